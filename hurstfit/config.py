@@ -1,0 +1,248 @@
+"""The configuration: what a user writes in TOML, checked key by key.
+
+Keys are checked here for their name and shape; what they mean together with the data is checked in :mod:`hurstfit.problem`.
+"""
+
+from __future__ import annotations
+
+import tomllib
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Annotated, Any, Literal
+
+from pydantic import BaseModel, ConfigDict, Field, ValidationError
+
+from hurstfit.errors import HurstfitError, did_you_mean
+
+__all__ = ["Config", "LoadedConfig", "load_config"]
+
+
+class _Table(BaseModel):
+    model_config = ConfigDict(extra="forbid", frozen=True, strict=True, allow_inf_nan=False)
+
+
+class MeasurementsTable(_Table):
+    """[measurements]: the table of counts."""
+
+    table: str
+    keep_not_rising: bool = False
+
+
+class WalkTable(_Table):
+    """[walk]: the construction of the noise, and a fraction table other than the one that ships."""
+
+    noise: Literal["type-I", "type-II"]
+    table: str | None = None
+
+
+class GalaxiesTable(_Table):
+    """[galaxies]: who is counted, and what counts as quiescent."""
+
+    min_mass: Literal["all"] | Annotated[float, Field(ge=0)] = "all"
+    criterion: str = "zero"
+    window: Annotated[float, Field(gt=0)] = 1.0
+
+
+class ClockTable(_Table):
+    """[clock]: from redshift to step number; `step` and `z_start` are a number or a prior."""
+
+    cosmology: str | dict[str, Any] = "Planck18"
+    step: Any
+    z_start: Any
+
+
+class CountsTable(_Table):
+    """[counts]: the distribution of a count."""
+
+    model: Literal["binomial"] = "binomial"
+
+
+class ExponentTable(_Table):
+    """[exponent]: the prior of H, by default uniform over the fraction table, and the value x of P(H > x)."""
+
+    prior: Any = None
+    above: float = 0.9
+
+
+class EngineTable(_Table):
+    """[engine]: how the posterior is sampled, and when to stop."""
+
+    kind: Literal["joint"] = "joint"
+    seed: Annotated[int, Field(ge=0)] = 1
+    walkers: Annotated[int, Field(ge=8)] | None = None
+    max_steps: Annotated[int, Field(ge=100)] = 100_000
+    target_ess: Annotated[float, Field(ge=100)] = 2000.0
+    max_rhat: Annotated[float, Field(gt=1.0, le=1.1)] = 1.01
+
+
+class OutputTable(_Table):
+    """[output]: the run file, relative to the directory that the command runs in."""
+
+    run: str | None = None
+
+
+class Config(_Table):
+    """A whole configuration."""
+
+    measurements: MeasurementsTable
+    walk: WalkTable
+    galaxies: GalaxiesTable = GalaxiesTable()
+    clock: ClockTable
+    selection: dict[str, dict[str, Any]] = Field(default_factory=dict)
+    counts: CountsTable = CountsTable()
+    exponent: ExponentTable = ExponentTable()
+    engine: EngineTable = EngineTable()
+    output: OutputTable = OutputTable()
+
+
+@dataclass(frozen=True)
+class LoadedConfig:
+    """A configuration with where it came from.
+
+    Attributes
+    ----------
+    config : Config
+        The checked contents.
+    name : str
+        How to call it in messages: the file, or "configuration" for a mapping.
+    folder : Path
+        Directory that the paths inside are relative to.
+    text : str
+        The contents as text, to be kept with a run.
+    """
+
+    config: Config
+    name: str
+    folder: Path
+    text: str
+
+
+def load_config(source: str | Path | Mapping[str, Any]) -> LoadedConfig:
+    """Read and check a configuration.
+
+    Parameters
+    ----------
+    source : str, Path or mapping
+        A TOML file, or its contents as nested mappings (paths inside are then relative to the current directory).
+
+    Returns
+    -------
+    LoadedConfig
+
+    Raises
+    ------
+    HurstfitError
+        If it cannot be read, or a key is unknown, missing or malformed.
+    """
+    if isinstance(source, Mapping):
+        contents, name, folder = dict(source), "configuration", Path()
+        text = to_toml(contents)
+    else:
+        path = Path(source)
+        name, folder = str(path), path.parent
+        text = _read_text(path)
+        try:
+            contents = tomllib.loads(text)
+        except tomllib.TOMLDecodeError as error:
+            raise HurstfitError(f"{path} is not valid TOML: {error}") from error
+    try:
+        return LoadedConfig(Config.model_validate(contents), name, folder, text)
+    except ValidationError as error:
+        raise HurstfitError(_sentence(name, error)) from error
+
+
+def _read_text(path: Path) -> str:
+    if path.is_dir():
+        raise HurstfitError(f"configuration {path} is a directory; name a TOML file")
+    try:
+        return path.read_text(encoding="utf-8")
+    except FileNotFoundError as error:
+        raise HurstfitError(f"configuration {path} does not exist") from error
+    except UnicodeDecodeError as error:
+        raise HurstfitError(f"configuration {path} is not a text file (UTF-8 is needed)") from error
+    except OSError as error:
+        raise HurstfitError(f"configuration {path} cannot be read: {error.strerror}") from error
+
+
+def to_toml(contents: Mapping[str, Any]) -> str:
+    """Write nested mappings of strings, numbers, booleans and lists as TOML.
+
+    Raises
+    ------
+    HurstfitError
+        If a value has no TOML form.
+    """
+
+    def value(x: Any) -> str:
+        if isinstance(x, bool):
+            return "true" if x else "false"
+        if isinstance(x, int | float):
+            return repr(x)
+        if isinstance(x, str):
+            escaped = x.replace("\\", "\\\\").replace('"', '\\"').replace("\n", "\\n").replace("\t", "\\t")
+            return f'"{escaped}"'
+        if isinstance(x, Path):
+            return value(str(x))
+        if isinstance(x, list | tuple):
+            return f"[{', '.join(map(value, x))}]"
+        if isinstance(x, Mapping):
+            return "{ " + ", ".join(f"{value(str(k))} = {value(v)}" for k, v in x.items()) + " }"
+        if hasattr(x, "item"):
+            return value(x.item())
+        raise HurstfitError(f"configuration: {x!r} of type {type(x).__name__} has no TOML form")
+
+    lines = []
+    for table, body in contents.items():
+        if not isinstance(body, Mapping):
+            lines.append(f"{value(table)} = {value(body)}")
+            continue
+        lines += ["", f"[{value(str(table))}]", *(f"{value(str(k))} = {value(v)}" for k, v in body.items() if v is not None)]
+    return "\n".join(lines).lstrip() + "\n"
+
+
+_SIMPLE = {
+    "string_type": "text in quotes",
+    "bool_type": "true or false",
+    "int_type": "a whole number",
+    "float_type": "a number",
+    "finite_number": "a finite number",
+    "dict_type": "a table",
+    "model_type": "a table",
+}
+
+
+def _sentence(name: str, error: ValidationError) -> str:
+    """Turn the first validation error into one sentence."""
+    first = error.errors()[0]
+    # members of a union are tried in turn and each leaves its own error; the place in the file is what they share
+    place = [str(part) for part in first["loc"] if not str(part).startswith(("literal[", "constrained-", "function-"))]
+    place = [part for part in place if part not in ("float", "str", "int", "dict[str,any]")]
+    table, key = place[0], ".".join(place[1:])
+    where = f"{name}, [{table}]" + (f" {key}" if key else "")
+    kind = first["type"]
+    if kind == "extra_forbidden":
+        model = Config.model_fields.get(table) if key else None
+        allowed = list(model.annotation.model_fields if model else Config.model_fields)  # type: ignore[union-attr]
+        word = place[-1]
+        inside = f", [{table}]" if key else ""
+        what = "key" if key else "table"
+        return f"{name}{inside}: unknown {what} {word!r}; allowed are {', '.join(allowed)}{did_you_mean(word, allowed)}"
+    if kind == "missing":
+        return f"{where} is missing" if key else f"{name}: the table [{table}] is missing"
+    alternatives = [e for e in error.errors() if e["loc"][:2] == first["loc"][:2]]
+    allowed = " or ".join(dict.fromkeys(_allowed(e) for e in alternatives))
+    return f"{where}: found {first['input']!r}, allowed is {allowed}"
+
+
+def _allowed(error: Any) -> str:
+    kind, context = error["type"], error.get("ctx", {})
+    if kind == "literal_error":
+        return str(context["expected"])
+    if kind in _SIMPLE:
+        return _SIMPLE[kind]
+    bounds = {"greater_than_equal": ("ge", "at least"), "greater_than": ("gt", "above"), "less_than_equal": ("le", "at most")}
+    if kind in bounds:
+        key, words = bounds[kind]
+        return f"a number {words} {context[key]:g}"
+    return str(error["msg"]).lower()

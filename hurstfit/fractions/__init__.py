@@ -1,0 +1,1 @@
+"""Fractions: what the walks predict, tabulated once with a known error."""

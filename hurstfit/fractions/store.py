@@ -1,0 +1,134 @@
+"""The HDF5 file of a fraction table: the one place that knows its format.
+
+Root attributes: ``format`` = "hurstfit fraction table", ``format_version``, ``noise``, ``sha256``.  Group ``made_by``: one string
+attribute for each setting and version.  Data sets: ``h``, ``steps``, ``masses``, ``windows``, ``thresholds`` (the axes), ``values``
+and ``errors`` with the axes (H, steps, parent sample: all walks and then each of ``masses``, window, criterion: zero and then each
+of ``thresholds``).  Values and errors are stored to six decimals; exactly known values are put back to full precision on reading.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from importlib import resources
+from pathlib import Path
+
+import h5py
+import numpy as np
+from numpy.typing import NDArray
+
+from hurstfit.errors import HurstfitError, did_you_mean
+from hurstfit.files import written_aside
+from hurstfit.fractions.axes import TableAxes
+from hurstfit.fractions.table import FractionTable, with_exact_values
+from hurstfit.walks.noise import NOISE_TYPES
+
+__all__ = ["FORMAT_VERSION", "load_table", "read_table", "shipped_path", "write_table"]
+
+FORMAT = "hurstfit fraction table"
+FORMAT_VERSION = 1
+AXES = ("h", "steps", "masses", "windows", "thresholds")
+
+
+def write_table(path: Path, table: FractionTable) -> None:
+    """Write a table; the file appears only when it is complete.
+
+    Parameters
+    ----------
+    path : Path
+        File to write; the caller has made sure that it may be.
+    table : FractionTable
+        What to write.
+    """
+    values, errors = (np.round(a, 6).astype(np.float32) for a in (table.values, table.errors))
+    with written_aside(path) as aside, h5py.File(aside, "w") as file:
+        file.attrs["format"] = FORMAT
+        file.attrs["format_version"] = FORMAT_VERSION
+        file.attrs["noise"] = table.noise
+        made_by = file.create_group("made_by")
+        for key, value in sorted(table.made_by.items()):
+            made_by.attrs[key] = value
+        for name in AXES:
+            file[name] = getattr(table.axes, name)
+        for name, array in (("values", values), ("errors", errors)):
+            # to six decimals, bit-packed: a tenth of the size, far below any simulation error
+            file.create_dataset(
+                name, data=array, chunks=(1, *array.shape[1:]), scaleoffset=6, shuffle=True, compression="gzip"
+            )
+        stored = [file[name][...] for name in ("values", "errors")]
+        file.attrs["sha256"] = _checksum(table.noise, table.axes, stored, table.made_by)
+
+
+def read_table(path: Path) -> FractionTable:
+    """Read and verify a table.
+
+    Raises
+    ------
+    HurstfitError
+        If the file is missing, is not a fraction table, is of a newer version, or does not match its checksum.
+    """
+    if not path.is_file():
+        raise HurstfitError(f"fraction table {path} does not exist")
+    try:
+        with h5py.File(path, "r") as file:
+            if file.attrs.get("format") != FORMAT:
+                raise HurstfitError(f"{path} is an HDF5 file but not a fraction table")
+            version = int(file.attrs["format_version"])
+            if version > FORMAT_VERSION:
+                raise HurstfitError(
+                    f"{path} has table format {version}, newer than this hurstfit reads ({FORMAT_VERSION}); update hurstfit"
+                )
+            noise = str(file.attrs["noise"])
+            made_by = {key: str(value) for key, value in file["made_by"].attrs.items()}
+            axes = TableAxes(**{name: file[name][...] for name in AXES})
+            stored = [file[name][...] for name in ("values", "errors")]
+            recorded = str(file.attrs["sha256"])
+    except HurstfitError:
+        raise
+    except (OSError, KeyError, ValueError, TypeError, RuntimeError) as error:
+        raise HurstfitError(f"fraction table {path} cannot be read: it is truncated, damaged or not HDF5") from error
+    if _checksum(noise, axes, stored, made_by) != recorded:
+        raise HurstfitError(f"fraction table {path} is damaged: its contents do not match its checksum")
+    values, errors = (a.astype(float) for a in stored)
+    with_exact_values(noise, axes, values, errors)
+    return FractionTable(noise, axes, values, errors, made_by, recorded)
+
+
+def shipped_path(noise: str) -> Path:
+    """Path of the table that ships for a noise type."""
+    return Path(str(resources.files("hurstfit"))) / "fractions" / "shipped" / f"{noise}.h5"
+
+
+def load_table(name: str | Path) -> FractionTable:
+    """Load a table that ships with the package, or one from a file.
+
+    Parameters
+    ----------
+    name : str or Path
+        ``"type-I"`` or ``"type-II"`` for the table that ships, otherwise a file.
+
+    Returns
+    -------
+    FractionTable
+
+    Raises
+    ------
+    HurstfitError
+        If there is no such table or it cannot be read.
+    """
+    if str(name) in NOISE_TYPES:
+        return read_table(shipped_path(str(name)))
+    if not Path(name).exists():
+        hint = did_you_mean(str(name), NOISE_TYPES)
+        raise HurstfitError(f"no fraction table {str(name)!r}: give {' or '.join(NOISE_TYPES)}, or a file{hint}")
+    return read_table(Path(name))
+
+
+def _checksum(noise: str, axes: TableAxes, stored: list[NDArray], made_by: object) -> str:
+    digest = hashlib.sha256(noise.encode())
+    digest.update(json.dumps(made_by, sort_keys=True).encode())
+    for name in AXES:
+        digest.update(np.ascontiguousarray(getattr(axes, name), dtype="<f8").tobytes())
+    for array in stored:
+        digest.update(np.ascontiguousarray(array, dtype="<f4").tobytes())
+    return digest.hexdigest()

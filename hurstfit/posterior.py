@@ -1,0 +1,164 @@
+"""The posterior: one vectorised function over many parameter vectors.
+
+This is the only likelihood in the program; every engine and every study calls it.  Parameters are sampled in coordinates in which
+the prior is standard normal (each parameter is its prior's quantile at the normal's probability), so that the log-prior is
+``-|t|^2 / 2`` plus a constant whatever the priors are, supports never have to be checked, and a start of order one is always sane.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hurstfit.counts import BinomialCounts
+from hurstfit.measurements import Measurements
+from hurstfit.prediction import BinPrediction
+from hurstfit.priors import Prior
+from hurstfit.selection import TERMS, SelectionTerms, counted_fraction
+
+__all__ = ["Parameter", "Posterior"]
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Parameter:
+    """A quantity with a prior: its name, unit and meaning."""
+
+    name: str
+    prior: Prior
+    unit: str
+    description: str
+
+
+@dataclass(frozen=True)
+class Posterior:
+    """Likelihood times priors for one set of bins.
+
+    Attributes
+    ----------
+    bins : Measurements
+        The bins that are fitted.
+    prediction : BinPrediction
+        True fractions from H and the clock.
+    exponent, step, z_start : Parameter
+        H, step length (Myr), redshift at which walks start; a fixed prior makes any of them a constant.
+    selection : dict of str to SelectionTerms
+        Selection terms of each study.
+    """
+
+    bins: Measurements
+    prediction: BinPrediction
+    exponent: Parameter
+    step: Parameter
+    z_start: Parameter
+    selection: dict[str, SelectionTerms]
+
+    @cached_property
+    def counts(self) -> BinomialCounts:
+        """The counts of the bins."""
+        return BinomialCounts(self.bins.n_total, self.bins.n_quiescent)
+
+    @cached_property
+    def quantities(self) -> tuple[Parameter, ...]:
+        """All quantities that enter, fixed ones too: H, step, z_start, then the terms of each study that has bins."""
+        terms = [
+            Parameter(f"{kind.name}[{study}]", self.selection[study].prior(kind.name), "", f"{kind.description}, {study}")
+            for study in self.bins.studies
+            for kind in TERMS.values()
+        ]
+        return (self.exponent, self.step, self.z_start, *terms)
+
+    @cached_property
+    def parameters(self) -> tuple[Parameter, ...]:
+        """The quantities that are free."""
+        return tuple(q for q in self.quantities if not q.prior.is_fixed)
+
+    @property
+    def names(self) -> tuple[str, ...]:
+        """Names of the free parameters."""
+        return tuple(p.name for p in self.parameters)
+
+    @cached_property
+    def _columns(self) -> dict[str, NDArray[np.intp]]:
+        """For each selection term, the column of the quantities that belongs to each bin."""
+        place = {q.name: i for i, q in enumerate(self.quantities)}
+        return {term: np.array([place[f"{term}[{study}]"] for study in self.bins.study]) for term in TERMS}
+
+    @cached_property
+    def _layout(self) -> tuple[NDArray[np.intp], Array]:
+        """Which quantities are free, and the values of all (nan where free)."""
+        free = np.array([i for i, q in enumerate(self.quantities) if not q.prior.is_fixed], dtype=np.intp)
+        values = np.array([q.prior.mean if q.prior.is_fixed else np.nan for q in self.quantities])
+        return free, values
+
+    # -- coordinates -----------------------------------------------------------------------------------------------------------
+
+    def physical(self, coordinates: Array) -> Array:
+        """Parameters from sampling coordinates, both of shape (..., parameters)."""
+        columns = [p.prior.from_normal(coordinates[..., i]) for i, p in enumerate(self.parameters)]
+        return np.stack(columns, axis=-1) if columns else np.zeros(coordinates.shape)
+
+    def coordinates(self, physical: Array) -> Array:
+        """Sampling coordinates from parameters, both of shape (..., parameters)."""
+        columns = [p.prior.to_normal(physical[..., i]) for i, p in enumerate(self.parameters)]
+        return np.stack(columns, axis=-1) if columns else np.zeros(physical.shape)
+
+    def complete(self, physical: Array) -> Array:
+        """Values of all quantities, shape (vectors, quantities), from those of the free parameters, (vectors, parameters)."""
+        free, values = self._layout
+        full = np.tile(values, (physical.shape[0], 1))
+        full[:, free] = physical
+        return full
+
+    # -- predictions -----------------------------------------------------------------------------------------------------------
+
+    def true_fractions(self, physical: Array) -> tuple[Array, NDArray[np.bool_]]:
+        """True quiescent fraction of every bin, (vectors, bins), and whether the vector is possible at all, (vectors,)."""
+        full = self.complete(physical)
+        return self.prediction(full[:, 0], full[:, 1], full[:, 2])
+
+    def counted_fractions(self, physical: Array) -> tuple[Array, NDArray[np.bool_]]:
+        """Probability that a catalogued galaxy of each bin is labelled quiescent; shapes as :meth:`true_fractions`."""
+        full = self.complete(physical)
+        fraction, possible = self.prediction(full[:, 0], full[:, 1], full[:, 2])
+        r, u, v = (full[:, self._columns[term]] for term in ("completeness_ratio", "missed_fraction", "contamination"))
+        return counted_fraction(fraction, r, u, v), possible
+
+    # -- densities -------------------------------------------------------------------------------------------------------------
+
+    def log_likelihood(self, physical: Array) -> Array:
+        """Log-probability of the counts.
+
+        Parameters
+        ----------
+        physical : ndarray, shape (vectors, parameters)
+            Free parameters in their own units.
+
+        Returns
+        -------
+        ndarray, shape (vectors,)
+            -inf where a vector is impossible.
+        """
+        p, possible = self.counted_fractions(physical)
+        return np.where(possible, self.counts.log_likelihood(p), -np.inf)
+
+    def log_prior(self, coordinates: Array) -> Array:
+        """Log-density of the prior in sampling coordinates, normalised; shape (vectors,)."""
+        return -0.5 * (coordinates**2).sum(axis=-1) - 0.5 * coordinates.shape[-1] * np.log(2 * np.pi)
+
+    def log_probability(self, coordinates: Array) -> Array:
+        """Log of likelihood times prior in sampling coordinates.
+
+        Parameters
+        ----------
+        coordinates : ndarray, shape (vectors, parameters)
+
+        Returns
+        -------
+        ndarray, shape (vectors,)
+        """
+        return self.log_prior(coordinates) + self.log_likelihood(self.physical(coordinates))

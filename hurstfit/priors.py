@@ -1,0 +1,677 @@
+"""The few distributions that a user can write down.
+
+A prior is a frozen dataclass that knows its density, its distribution function and, above all, its quantile: the
+samplers walk in a space where every free parameter is standard normal, and `Prior.from_normal` brings a point of that
+space back.  A distribution function alone loses the upper tail (1 - 1e-17 is 1 in floating point), so everything here
+works from the pair of tail probabilities, P(X <= x) and P(X > x), and uses the smaller of the two.
+
+A new distribution is a subclass with a density, the two tails and their inverse; `parse_prior` turns what a TOML file
+says into one of them, and refuses everything else with a sentence.
+"""
+
+from __future__ import annotations
+
+import math
+import numbers
+import reprlib
+from abc import ABC, abstractmethod
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from functools import cached_property, lru_cache
+from typing import NoReturn
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+from scipy.special import betainc, betaincc, betainccinv, betaincinv, betaln, ndtr, ndtri, xlog1py, xlogy
+
+from hurstfit.errors import HurstfitError, did_you_mean
+
+__all__ = [
+    "Beta",
+    "Fixed",
+    "LogNormal",
+    "Prior",
+    "TruncatedNormal",
+    "Uniform",
+    "beta_from_mean_sd",
+    "parse_prior",
+]
+
+Array = NDArray[np.float64]
+
+_LOG_SQRT_2PI = 0.5 * math.log(2.0 * math.pi)
+# Outside these limits the quantiles of a Beta leave the range of floating point or lose most of their digits.
+_BETA_MIN, _BETA_MAX = 0.05, 1e8
+# A normal that keeps less than this of its probability inside its limits is a mistake; its quantiles would be rounding.
+_LEAST_MASS = 1e-12
+
+
+class Prior(ABC):
+    """What is believed of one number before the counts are seen.
+
+    Attributes
+    ----------
+    lo, hi : float
+        Ends of the support.
+    """
+
+    lo: float
+    hi: float
+
+    @property
+    def mean(self) -> float:
+        """Mean of the distribution."""
+        return self._moments()[0]
+
+    @property
+    def sd(self) -> float:
+        """Standard deviation of the distribution."""
+        return self._moments()[1]
+
+    @property
+    def is_fixed(self) -> bool:
+        """Whether the value is known, so that there is nothing to sample."""
+        return False
+
+    @abstractmethod
+    def describe(self) -> str:
+        """Say in plain text what the prior is."""
+
+    @abstractmethod
+    def _moments(self) -> tuple[float, float]:
+        """Mean and standard deviation."""
+
+    @abstractmethod
+    def _log_density(self, x: Array) -> Array:
+        """Log density at `x`, which lies in the support."""
+
+    @abstractmethod
+    def _tails(self, x: Array) -> tuple[Array, Array]:
+        """P(X <= x) and P(X > x), each to full relative precision, at `x` in the support."""
+
+    @abstractmethod
+    def _quantile(self, lower: Array, upper: Array) -> Array:
+        """Value with probability `lower` below it and `upper` above it; the two sum to one."""
+
+    def log_pdf(self, x: ArrayLike) -> Array:
+        """Log of the normalised density.
+
+        Parameters
+        ----------
+        x : array_like
+            Values, any shape.
+
+        Returns
+        -------
+        ndarray
+            Shape of `x`; minus infinity outside the support.  For a fixed value 0 at the value: the log of a
+            probability, since there is no density.
+        """
+        x = np.asarray(x, float)
+        inside = (x >= self.lo) & (x <= self.hi)
+        return np.where(inside, self._log_density(np.clip(x, self.lo, self.hi)), -np.inf)[()]
+
+    def cdf(self, x: ArrayLike) -> Array:
+        """Probability of a value of at most `x`; shape of `x`."""
+        return self._tails(np.clip(np.asarray(x, float), self.lo, self.hi))[0][()]
+
+    def ppf(self, u: ArrayLike) -> Array:
+        """Quantile: the value with probability `u` below it; shape of `u`, NaN where `u` is not in 0..1."""
+        u = np.asarray(u, float)
+        u = np.where((u >= 0.0) & (u <= 1.0), u, np.nan)
+        return self._quantile(u, 1.0 - u)[()]
+
+    def from_normal(self, t: ArrayLike) -> Array:
+        """Map standard normal numbers to values distributed as this prior: ppf(Phi(t)), stable in both tails.
+
+        Parameters
+        ----------
+        t : array_like
+            Standard normal numbers, any shape.
+
+        Returns
+        -------
+        ndarray
+            Shape of `t`, within the support.
+        """
+        t = np.asarray(t, float)
+        return self._quantile(ndtr(t), ndtr(-t))[()]
+
+    def to_normal(self, x: ArrayLike) -> Array:
+        """Inverse of `from_normal`; infinite at and beyond the ends of the support, 0 for a fixed value."""
+        return _normal_quantile(*self._tails(np.clip(np.asarray(x, float), self.lo, self.hi)))[()]
+
+    def sample(self, rng: np.random.Generator, size: int | tuple[int, ...] | None = None) -> Array:
+        """Draw independent values with the generator `rng`; shape `size`."""
+        return self.from_normal(rng.standard_normal(size))
+
+
+@dataclass(frozen=True)
+class Fixed(Prior):
+    """A value that is known."""
+
+    value: float
+    lo: float = field(init=False, repr=False)
+    hi: float = field(init=False, repr=False)
+
+    def __post_init__(self) -> None:
+        _require(math.isfinite(self.value), "a fixed value must be finite")
+        object.__setattr__(self, "lo", self.value)
+        object.__setattr__(self, "hi", self.value)
+
+    @property
+    def is_fixed(self) -> bool:
+        """Always true."""
+        return True
+
+    def describe(self) -> str:
+        """Such as ``fixed at 0.02``."""
+        return f"fixed at {self.value:.6g}"
+
+    def _moments(self) -> tuple[float, float]:
+        return self.value, 0.0
+
+    def _log_density(self, x: Array) -> Array:
+        return np.zeros_like(x)
+
+    def _tails(self, x: Array) -> tuple[Array, Array]:
+        return np.ones_like(x), np.zeros_like(x)
+
+    def _quantile(self, lower: Array, upper: Array) -> Array:
+        return np.full_like(lower, self.value)
+
+    def cdf(self, x: ArrayLike) -> Array:
+        """Step from 0 to 1 at the value."""
+        return (np.asarray(x, float) >= self.value).astype(float)[()]
+
+    def to_normal(self, x: ArrayLike) -> Array:
+        """Zero: a fixed value has no coordinate of its own."""
+        return np.zeros_like(np.asarray(x, float))[()]
+
+
+@dataclass(frozen=True)
+class Uniform(Prior):
+    """Equally likely from `lo` to `hi`."""
+
+    lo: float
+    hi: float
+
+    def __post_init__(self) -> None:
+        _require(self.lo < self.hi and math.isfinite(self.hi - self.lo), "uniform needs finite lo < hi")
+
+    def describe(self) -> str:
+        """Such as ``uniform from 0.05 to 1.3``."""
+        return f"uniform from {self.lo:.6g} to {self.hi:.6g}"
+
+    def _moments(self) -> tuple[float, float]:
+        return 0.5 * self.lo + 0.5 * self.hi, (self.hi - self.lo) / math.sqrt(12.0)
+
+    def _log_density(self, x: Array) -> Array:
+        return np.full_like(x, -math.log(self.hi - self.lo))
+
+    def _tails(self, x: Array) -> tuple[Array, Array]:
+        width = self.hi - self.lo
+        return (x - self.lo) / width, (self.hi - x) / width
+
+    def _quantile(self, lower: Array, upper: Array) -> Array:
+        # A weighted mean of the ends has no cancellation on either side.
+        return np.clip(self.lo * upper + self.hi * lower, self.lo, self.hi)
+
+
+@dataclass(frozen=True)
+class Beta(Prior):
+    """Density proportional to x^(a-1) (1-x)^(b-1) from 0 to 1."""
+
+    a: float
+    b: float
+    lo: float = field(default=0.0, init=False, repr=False)
+    hi: float = field(default=1.0, init=False, repr=False)
+
+    def __post_init__(self) -> None:
+        _require(0.0 < self.a < math.inf and 0.0 < self.b < math.inf, "Beta needs finite a > 0 and b > 0")
+
+    def describe(self) -> str:
+        """Such as ``Beta(3, 57): mean 0.05, sd 0.028``."""
+        return f"Beta({self.a:.6g}, {self.b:.6g}): {_moments_text(self)}"
+
+    def _moments(self) -> tuple[float, float]:
+        n = self.a + self.b
+        return self.a / n, math.sqrt(self.a / n * (self.b / n) / (n + 1.0))
+
+    def _log_density(self, x: Array) -> Array:
+        return xlogy(self.a - 1.0, x) + xlog1py(self.b - 1.0, -x) - betaln(self.a, self.b)
+
+    def _tails(self, x: Array) -> tuple[Array, Array]:
+        return betainc(self.a, self.b, x), betaincc(self.a, self.b, x)
+
+    def _quantile(self, lower: Array, upper: Array) -> Array:
+        low = lower <= 0.5
+        x = np.empty_like(lower)
+        betaincinv(self.a, self.b, lower, out=x, where=low)
+        betainccinv(self.a, self.b, upper, out=x, where=~low)
+        lost = np.isnan(x)
+        if lost.any():
+            # scipy gives NaN for some probabilities below about 1e-17; that far out the leading term of the tail,
+            # p = y^a / (a B(a, b)), is more exact than a sampler can notice.
+            ln_b = betaln(self.a, self.b)
+            with np.errstate(divide="ignore"):
+                from_below = np.exp((np.log(lower * self.a) + ln_b) / self.a)
+                from_above = 1.0 - np.exp((np.log(upper * self.b) + ln_b) / self.b)
+            x = np.where(lost, np.clip(np.where(low, from_below, from_above), 0.0, 1.0), x)
+        return x
+
+
+@dataclass(frozen=True)
+class TruncatedNormal(Prior):
+    """Normal with mean `centre` and standard deviation `spread`, cut to `lo`..`hi` and renormalised.
+
+    The fields are not called mean and sd because cutting changes both: `mean` and `sd` are those after the cut.
+    """
+
+    centre: float
+    spread: float
+    lo: float
+    hi: float
+
+    def __post_init__(self) -> None:
+        _require(math.isfinite(self.centre) and 0.0 < self.spread < math.inf, "a normal needs finite mean and sd > 0")
+        _require(self.lo < self.hi, "a truncated normal needs lo < hi")
+        _require(self._mass_mean_sd[0] >= _LEAST_MASS, "a truncated normal needs some probability between its limits")
+
+    @cached_property
+    def _ends(self) -> tuple[float, float]:
+        """Both limits in units of the spread."""
+        return (self.lo - self.centre) / self.spread, (self.hi - self.centre) / self.spread
+
+    @cached_property
+    def _end_tails(self) -> tuple[float, float, float, float]:
+        """P below and above the lower limit, P below and above the upper limit, for the normal that is not cut."""
+        a, b = self._ends
+        return float(ndtr(a)), float(ndtr(-a)), float(ndtr(b)), float(ndtr(-b))
+
+    @cached_property
+    def _mass_mean_sd(self) -> tuple[float, float, float]:
+        """Probability between the limits, mean and standard deviation.
+
+        By Gauss-Legendre quadrature of positive terms: the closed forms subtract nearly equal numbers where the
+        limits are close together or far out.  Beyond 12 spreads from the mode the integrand is below 1e-31 of its peak.
+        """
+        a, b = self._ends
+        mode = min(max(a, 0.0), b)
+        left, right = max(a, mode - 12.0), min(b, mode + 12.0)
+        nodes, weights = _gauss_legendre()
+        z = 0.5 * (left + right) + 0.5 * (right - left) * nodes
+        w = weights * 0.5 * (right - left) * np.exp(-0.5 * z * z - _LOG_SQRT_2PI)
+        mass = float(w.sum())
+        if not mass > 0.0:
+            return 0.0, math.nan, math.nan
+        mean = float((w * z).sum()) / mass
+        variance = float((w * (z - mean) ** 2).sum()) / mass
+        return mass, self.centre + self.spread * mean, self.spread * math.sqrt(variance)
+
+    def describe(self) -> str:
+        """Such as ``normal 0.8 +- 0.1, truncated to 0..1: mean 0.797, sd 0.097``."""
+        text = f"normal {self.centre:.6g} +- {self.spread:.6g}"
+        if math.isinf(self.lo) and math.isinf(self.hi):
+            return text
+        return f"{text}, truncated to {_range_text(self.lo, self.hi)}: {_moments_text(self)}"
+
+    def _moments(self) -> tuple[float, float]:
+        return self._mass_mean_sd[1:]
+
+    def _log_density(self, x: Array) -> Array:
+        z = (x - self.centre) / self.spread
+        return -0.5 * z * z - (_LOG_SQRT_2PI + math.log(self.spread * self._mass_mean_sd[0]))
+
+    def _tails(self, x: Array) -> tuple[Array, Array]:
+        a, b = self._ends
+        below_a, above_a, below_b, above_b = self._end_tails
+        z = (x - self.centre) / self.spread
+        # Each difference is taken on the side where its terms are small.
+        lower = above_a - ndtr(-z) if a > 0.0 else ndtr(z) - below_a
+        upper = below_b - ndtr(z) if b < 0.0 else ndtr(-z) - above_b
+        mass = self._mass_mean_sd[0]
+        return np.clip(lower / mass, 0.0, 1.0), np.clip(upper / mass, 0.0, 1.0)
+
+    def _quantile(self, lower: Array, upper: Array) -> Array:
+        below_a, above_a, below_b, above_b = self._end_tails
+        # Probabilities of the normal that is not cut, as sums of positive terms: no cancellation on either side.
+        z = _normal_quantile(below_a * upper + below_b * lower, above_a * upper + above_b * lower)
+        return np.clip(self.centre + self.spread * z, self.lo, self.hi)
+
+
+@dataclass(frozen=True)
+class LogNormal(Prior):
+    """Positive number whose natural logarithm is normal about ln(median) with standard deviation `sigma`."""
+
+    median: float
+    sigma: float
+    lo: float = field(default=0.0, init=False, repr=False)
+    hi: float = field(default=math.inf, init=False, repr=False)
+
+    def __post_init__(self) -> None:
+        _require(0.0 < self.median < math.inf and 0.0 < self.sigma < math.inf, "lognormal needs median, sigma > 0")
+        # ndtri never exceeds 38.5 in size, so within this limit no quantile overflows or vanishes.
+        _require(abs(math.log(self.median)) + 38.5 * self.sigma < 700.0, "lognormal is too wide to compute with")
+
+    def describe(self) -> str:
+        """Such as ``lognormal with median 1, scatter of ln 0.2``."""
+        return f"lognormal with median {self.median:.6g}, scatter of ln {self.sigma:.6g}"
+
+    def _moments(self) -> tuple[float, float]:
+        mean = self.median * math.exp(0.5 * self.sigma**2)
+        return mean, mean * math.sqrt(math.expm1(self.sigma**2))
+
+    def _z(self, x: Array) -> Array:
+        with np.errstate(divide="ignore"):
+            return np.log(x / self.median) / self.sigma
+
+    def _log_density(self, x: Array) -> Array:
+        positive = np.where(x > 0.0, x, 1.0)
+        value = -0.5 * self._z(positive) ** 2 - np.log(positive * self.sigma) - _LOG_SQRT_2PI
+        return np.where(x > 0.0, value, -np.inf)
+
+    def _tails(self, x: Array) -> tuple[Array, Array]:
+        z = self._z(x)
+        return ndtr(z), ndtr(-z)
+
+    def _quantile(self, lower: Array, upper: Array) -> Array:
+        return self.median * np.exp(self.sigma * _normal_quantile(lower, upper))
+
+    def from_normal(self, t: ArrayLike) -> Array:
+        """Median times exp(sigma t); shape of `t`."""
+        return self.median * np.exp(self.sigma * np.asarray(t, float))
+
+    def to_normal(self, x: ArrayLike) -> Array:
+        """ln(x / median) / sigma; minus infinity at and below zero."""
+        return self._z(np.maximum(np.asarray(x, float), 0.0))
+
+
+def beta_from_mean_sd(mean: float, sd: float) -> Beta:
+    """Beta distribution with a given mean and standard deviation.
+
+    Parameters
+    ----------
+    mean : float
+        Between 0 and 1, ends excluded.
+    sd : float
+        Positive, with sd^2 < mean (1 - mean): no distribution on 0..1 scatters more.
+
+    Returns
+    -------
+    Beta
+        a = mean k and b = (1 - mean) k with k = mean (1 - mean) / sd^2 - 1 (method of moments).
+
+    Raises
+    ------
+    ValueError
+        Where no Beta has these moments.
+    """
+    _require(0.0 < mean < 1.0 and 0.0 < sd < 1.0 and sd * sd < mean * (1.0 - mean), "no Beta has this mean and sd")
+    k = mean * (1.0 - mean) / sd / sd - 1.0
+    return Beta(mean * k, (1.0 - mean) * k)
+
+
+def parse_prior(spec: object, *, where: str, lo: float, hi: float, lo_open: bool = False) -> Prior:
+    """Turn what a TOML file says about one number into a prior.
+
+    Parameters
+    ----------
+    spec : object
+        A number (a fixed value) or a table of exactly one form: ``{uniform = [a, b]}``, ``{beta = [a, b]}``,
+        ``{mean = m, sd = s}``, ``{normal = [mean, sd]}`` with an optional ``between = [a, b]``,
+        ``{lognormal = [median, sigma]}`` or ``{validation = [j, m]}`` (j of m objects, under a flat prior).
+    where : str
+        What an error sentence starts with, such as ``demo.toml, [selection.Larkspur-Deep] contamination``.
+    lo, hi : float
+        Range that the number can have at all; a prior that reaches beyond is refused.  `mean` and `validation` need
+        0..1, `lognormal` needs 0..infinity, and `beta` a range that holds 0..1.
+    lo_open : bool
+        Whether a fixed value at `lo` itself is refused.
+
+    Returns
+    -------
+    Prior
+        The prior.
+
+    Raises
+    ------
+    HurstfitError
+        Where `spec` is anything else.
+    """
+    return _Entry(where, lo, hi, lo_open).parse(spec)
+
+
+@dataclass(frozen=True)
+class _Entry:
+    """One entry of a configuration: its name and the range of its number."""
+
+    where: str
+    lo: float
+    hi: float
+    lo_open: bool
+
+    def parse(self, spec: object) -> Prior:
+        if not isinstance(spec, dict):
+            return self._fixed(self._number(spec, "", or_else=f"; allowed: {self._allowed()}"))
+        keys = [str(key) for key in spec]
+        known = [*_FORMS, *(extra for form in _FORMS.values() for extra in form.extras)]
+        for key in keys:
+            if key not in known:
+                self._refuse(f"unknown key '{key[:40]}'{did_you_mean(key, known)}; allowed: {self._allowed()}")
+        heads = [key for key in keys if key in _FORMS]
+        if len(heads) != 1:
+            found = " and ".join(f"'{key}'" for key in keys) if keys else "an empty table"
+            self._refuse(f"found {found}; allowed is exactly one of: {self._allowed()}")
+        form = _FORMS[heads[0]]
+        for key in keys:
+            if key != heads[0] and key not in form.extras:
+                self._refuse(f"found '{key}' beside '{heads[0]}'; allowed is exactly one of: {self._allowed()}")
+        if not form.usable(self.lo, self.hi):
+            self._refuse(
+                f"'{heads[0]}' does not suit a number that can lie {self._range()} (it needs {form.needs}); "
+                f"allowed: {self._allowed()}"
+            )
+        return form.build(self, {str(key): value for key, value in spec.items()})
+
+    def _fixed(self, value: float) -> Prior:
+        if not self.lo <= value <= self.hi or (self.lo_open and value == self.lo):
+            self._refuse(f"found {value:.6g}; allowed is a number {self._range()}")
+        return Fixed(value)
+
+    def _uniform(self, spec: dict[str, object]) -> Prior:
+        a, b = self._limits(spec["uniform"], "uniform")
+        if not math.isfinite(b - a):
+            self._refuse(f"uniform = [{a:.6g}, {b:.6g}] is too wide to compute with; allowed is a finite width")
+        return Uniform(a, b)
+
+    def _beta(self, spec: dict[str, object]) -> Prior:
+        a, b = self._pair(spec["beta"], "beta", "[a, b]")
+        if min(a, b) < _BETA_MIN or max(a, b) > _BETA_MAX:
+            self._refuse(
+                f"found beta = [{a:.6g}, {b:.6g}]; allowed are two numbers from {_BETA_MIN:g} to {_BETA_MAX:g}"
+            )
+        return Beta(a, b)
+
+    def _mean_sd(self, spec: dict[str, object]) -> Prior:
+        if "sd" not in spec:
+            self._refuse("found 'mean' without 'sd'; allowed: {mean = m, sd = s}")
+        mean, sd = self._number(spec["mean"], "mean"), self._number(spec["sd"], "sd")
+        if not 0.0 < mean < 1.0:
+            self._refuse(f"found mean = {mean:.6g}; allowed is a number between 0 and 1, ends excluded")
+        if not 0.0 < sd < (largest := math.sqrt(mean * (1.0 - mean))):
+            self._refuse(
+                f"found sd = {sd:.6g}; with mean = {mean:.6g} allowed is a number above 0 and below {largest:.4g}"
+            )
+        k = mean * (1.0 - mean) / sd / sd - 1.0
+        a, b = mean * k, (1.0 - mean) * k
+        if min(a, b) < _BETA_MIN or max(a, b) > _BETA_MAX:
+            self._refuse(
+                f"mean = {mean:.6g} with sd = {sd:.6g} matches Beta({a:.4g}, {b:.4g}); allowed are parameters from "
+                f"{_BETA_MIN:g} to {_BETA_MAX:g} (for a smaller sd, fix the value)"
+            )
+        return Beta(a, b)
+
+    def _normal(self, spec: dict[str, object]) -> Prior:
+        centre, spread = self._pair(spec["normal"], "normal", "[mean, sd]")
+        if not spread > 0.0:
+            self._refuse(f"found the sd {spread:.6g} in normal = [mean, sd]; allowed is a number above 0")
+        a, b = self._limits(spec["between"], "between") if "between" in spec else (self.lo, self.hi)
+        try:
+            return TruncatedNormal(centre, spread, a, b)
+        except ValueError:
+            self._refuse(
+                f"normal = [{centre:.6g}, {spread:.6g}] has next to no probability in {_range_text(a, b)}; "
+                f"allowed is one that keeps more than {_LEAST_MASS:g} of it"
+            )
+
+    def _lognormal(self, spec: dict[str, object]) -> Prior:
+        median, sigma = self._pair(spec["lognormal"], "lognormal", "[median, sigma]")
+        if not (median > 0.0 and sigma > 0.0):
+            self._refuse(f"found lognormal = [{median:.6g}, {sigma:.6g}]; allowed are a median and a sigma above 0")
+        try:
+            return LogNormal(median, sigma)
+        except ValueError:
+            self._refuse(
+                f"lognormal = [{median:.6g}, {sigma:.6g}] is too wide to compute with; "
+                f"allowed is |ln(median)| + 38.5 sigma below 700"
+            )
+
+    def _validation(self, spec: dict[str, object]) -> Prior:
+        j, m = self._pair(spec["validation"], "validation", "[j, m]")
+        if not (j.is_integer() and m.is_integer() and 0 <= j <= m and 0 < m <= _BETA_MAX / 2):
+            self._refuse(
+                f"found validation = [{j:.10g}, {m:.10g}]; allowed are two whole numbers, j of m objects, "
+                f"with 0 <= j <= m and m from 1 to {_BETA_MAX / 2:g}"
+            )
+        return Beta(j + 1.0, m - j + 1.0)
+
+    def _limits(self, value: object, key: str) -> tuple[float, float]:
+        a, b = self._pair(value, key, "[a, b]")
+        if not a < b:
+            self._refuse(f"found {key} = [{a:.6g}, {b:.6g}]; allowed is a pair in rising order")
+        if not (self.lo <= a and b <= self.hi):
+            self._refuse(f"found {key} = [{a:.6g}, {b:.6g}]; allowed are limits {self._range()}")
+        return a, b
+
+    def _pair(self, value: object, key: str, shape: str) -> tuple[float, float]:
+        if not isinstance(value, list | tuple) or len(value) != 2:
+            self._refuse(f"found {key} = {_show(value)}; allowed is a list of two numbers, {key} = {shape}")
+        return self._number(value[0], key), self._number(value[1], key)
+
+    def _number(self, value: object, key: str, or_else: str = "; allowed is a finite number") -> float:
+        # bool is a Real to Python; a user who writes true did not mean 1.
+        if isinstance(value, numbers.Real) and not isinstance(value, bool):
+            try:
+                number = float(value)
+            except OverflowError:
+                number = math.inf
+            if math.isfinite(number):
+                return number
+        inside = f" in '{key}'" if key else ""
+        self._refuse(f"found {_show(value)}{inside}{or_else}")
+
+    def _range(self) -> str:
+        return _range_words(self.lo, self.hi, self.lo_open)
+
+    def _allowed(self) -> str:
+        forms = (form.example for form in _FORMS.values() if form.usable(self.lo, self.hi))
+        return ", ".join([f"a number {self._range()}", *forms])
+
+    def _refuse(self, what: str) -> NoReturn:
+        # `from None`: where a ValueError led here, it says no more than the sentence.
+        raise HurstfitError(f"{self.where}: {what}") from None
+
+
+@dataclass(frozen=True)
+class _Form:
+    """One way of writing a prior as a table."""
+
+    example: str
+    build: Callable[[_Entry, dict[str, object]], Prior]
+    extras: tuple[str, ...] = ()
+    needs: str = ""
+    usable: Callable[[float, float], bool] = lambda lo, hi: True
+
+
+def _is_unit(lo: float, hi: float) -> bool:
+    return lo == 0.0 and hi == 1.0
+
+
+# By the key that tells the form.
+_FORMS = {
+    "uniform": _Form("{uniform = [a, b]}", _Entry._uniform),
+    "beta": _Form(
+        "{beta = [a, b]}",
+        _Entry._beta,
+        needs="a range that holds 0 to 1",
+        usable=lambda lo, hi: lo <= 0.0 and hi >= 1.0,
+    ),
+    "mean": _Form("{mean = m, sd = s}", _Entry._mean_sd, ("sd",), "the range 0 to 1", _is_unit),
+    "normal": _Form("{normal = [mean, sd]} (may add between = [a, b])", _Entry._normal, ("between",)),
+    "lognormal": _Form(
+        "{lognormal = [median, sigma]}",
+        _Entry._lognormal,
+        needs="a range from 0 without upper end",
+        usable=lambda lo, hi: lo == 0.0 and hi == math.inf,
+    ),
+    "validation": _Form("{validation = [j, m]}", _Entry._validation, (), "the range 0 to 1", _is_unit),
+}
+
+
+def _normal_quantile(lower: Array, upper: Array) -> Array:
+    """Find the standard normal quantile from both tail probabilities, by way of the smaller one."""
+    low = lower <= 0.5
+    z = ndtri(np.where(low, lower, upper))
+    return np.where(low, z, -z)
+
+
+@lru_cache(maxsize=1)
+def _gauss_legendre() -> tuple[Array, Array]:
+    """Nodes and weights; 100 of them over 24 spreads integrate a normal density to rounding."""
+    nodes, weights = np.polynomial.legendre.leggauss(100)
+    return nodes, weights
+
+
+def _require(condition: bool, message: str) -> None:
+    if not condition:
+        raise ValueError(message)
+
+
+def _moments_text(prior: Prior) -> str:
+    return f"mean {_digits(prior.mean, 3)}, sd {_digits(prior.sd, 2)}"
+
+
+def _digits(x: float, digits: int) -> str:
+    """Round to some significant digits, but never write a readable whole number with an exponent."""
+    return f"{x:.0f}" if 10.0**digits <= abs(x) < 1e7 else f"{x:.{digits}g}"
+
+
+def _range_text(lo: float, hi: float) -> str:
+    """Short form for a description: ``0..1``, ``above 0``, ``below 1``."""
+    if math.isinf(hi):
+        return f"above {lo:.6g}" if math.isfinite(lo) else "any number"
+    return f"{lo:.6g}..{hi:.6g}" if math.isfinite(lo) else f"below {hi:.6g}"
+
+
+def _range_words(lo: float, hi: float, lo_open: bool) -> str:
+    """Long form for a sentence: ``from 0 to 1``, ``above 0``, ``of 0 or more``."""
+    if math.isinf(lo) and math.isinf(hi):
+        return "of any size"
+    if math.isinf(lo):
+        return f"of {hi:.6g} or less"
+    if math.isinf(hi):
+        return f"above {lo:.6g}" if lo_open else f"of {lo:.6g} or more"
+    return f"above {lo:.6g} and up to {hi:.6g}" if lo_open else f"from {lo:.6g} to {hi:.6g}"
+
+
+def _show(value: object) -> str:
+    """Say what was found, on one line, briefly, and as the file writes it."""
+    if isinstance(value, bool):
+        return "true" if value else "false"
+    if isinstance(value, dict):
+        return "a table"
+    try:
+        return reprlib.repr(value).replace("\n", " ")
+    except ValueError:  # Python refuses to write out a whole number of thousands of digits
+        return "a number beyond all measure"
