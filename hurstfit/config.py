@@ -231,8 +231,8 @@ def _sentence(name: str, error: ValidationError) -> str:
     if kind == "missing":
         return f"{where} is missing" if key else f"{name}: the table [{table}] is missing"
     alternatives = [e for e in error.errors() if e["loc"][:2] == first["loc"][:2]]
-    allowed = " or ".join(dict.fromkeys(_allowed(e) for e in alternatives))
-    return f"{where}: found {first['input']!r}, allowed is {allowed}"
+    admitted = " or ".join(dict.fromkeys(_allowed(e) for e in alternatives))
+    return f"{where}: found {first['input']!r}, allowed is {admitted}"
 
 
 def _allowed(error: Any) -> str:

@@ -2,7 +2,8 @@
 
 This is the only likelihood in the program; every engine and every study calls it.  Parameters are sampled in coordinates in which
 the prior is standard normal (each parameter is its prior's quantile at the normal's probability), so that the log-prior is
-``-|t|^2 / 2`` plus a constant whatever the priors are, supports never have to be checked, and a start of order one is always sane.
+``-|t|^2 / 2`` plus a constant whatever the priors are, supports never have to be checked, and a start of order one is always
+sane.
 """
 
 from __future__ import annotations
@@ -98,12 +99,12 @@ class Posterior:
     # -- coordinates -----------------------------------------------------------------------------------------------------------
 
     def physical(self, coordinates: Array) -> Array:
-        """Parameters from sampling coordinates, both of shape (..., parameters)."""
+        """Turn sampling coordinates into parameters, both of shape (..., parameters)."""
         columns = [p.prior.from_normal(coordinates[..., i]) for i, p in enumerate(self.parameters)]
         return np.stack(columns, axis=-1) if columns else np.zeros(coordinates.shape)
 
     def coordinates(self, physical: Array) -> Array:
-        """Sampling coordinates from parameters, both of shape (..., parameters)."""
+        """Turn parameters into sampling coordinates, both of shape (..., parameters)."""
         columns = [p.prior.to_normal(physical[..., i]) for i, p in enumerate(self.parameters)]
         return np.stack(columns, axis=-1) if columns else np.zeros(physical.shape)
 
@@ -117,7 +118,7 @@ class Posterior:
     # -- predictions -----------------------------------------------------------------------------------------------------------
 
     def true_fractions(self, physical: Array) -> tuple[Array, NDArray[np.bool_]]:
-        """True quiescent fraction of every bin, (vectors, bins), and whether the vector is possible at all, (vectors,)."""
+        """Predict the true quiescent fraction, (vectors, bins), and whether the vector is possible at all, (vectors,)."""
         full = self.complete(physical)
         return self.prediction(full[:, 0], full[:, 1], full[:, 2])
 

@@ -1,8 +1,8 @@
 """The true quiescent fraction of every bin: exponent, clock and fraction table brought together.
 
 A bin spans a redshift range, hence a range of step numbers; its fraction is the average of the table over that range, weighted by
-comoving volume (:meth:`hurstfit.clock.CosmicClock.bin_nodes`).  Averaging is linear, so that with a fixed clock everything but H is
-one matrix, computed once.
+comoving volume (:meth:`hurstfit.clock.CosmicClock.bin_nodes`).  Averaging is linear, so that with a fixed clock everything
+but H is one matrix, computed once.
 """
 
 from __future__ import annotations
@@ -98,13 +98,13 @@ class BinPrediction:
             coefficients, reached = self._fixed
             return np.clip(in_h @ coefficients, 0.0, 1.0), np.full(H.shape, reached)
         ages, weights = self._nodes
-        steps = (ages[None] - self.clock.age(z_start)[:, None, None]) / step[:, None, None]
+        # a proposal far out in the tail of the prior may be a step of zero
+        lengths = np.maximum(step, 1e-6)[:, None, None]
+        steps = (ages[None] - self.clock.age(z_start)[:, None, None]) / lengths
         nodes = self.surface.steps
         possible = np.all((steps >= nodes[0]) & (steps <= nodes[-1]), axis=(1, 2))
         rows = in_h @ self.surface.coefficients
         first, basis = spline_basis(self.surface.step_knots, np.log(np.clip(steps, nodes[0], nodes[-1])))
         flat = first.reshape(H.size, -1)
-        gathered = sum(
-            np.take_along_axis(rows, flat + b, axis=1).reshape(first.shape) * basis[..., b] for b in range(4)
-        )
+        gathered = sum(np.take_along_axis(rows, flat + b, axis=1).reshape(first.shape) * basis[..., b] for b in range(4))
         return np.clip(np.einsum("wbk,bk->wb", gathered, weights), 0.0, 1.0), possible

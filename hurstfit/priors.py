@@ -298,13 +298,15 @@ class TruncatedNormal(Prior):
         """
         a, b = self._ends
         mode = min(max(a, 0.0), b)
+        if abs(mode) > 30.0:
+            return 0.0, math.nan, math.nan  # less than 1e-197
         left, right = max(a, mode - 12.0), min(b, mode + 12.0)
         nodes, weights = _gauss_legendre()
         z = 0.5 * (left + right) + 0.5 * (right - left) * nodes
         w = weights * 0.5 * (right - left) * np.exp(-0.5 * z * z - _LOG_SQRT_2PI)
         mass = float(w.sum())
-        if not mass > 0.0:
-            return 0.0, math.nan, math.nan
+        if mass == 0.0:
+            return 0.0, math.nan, math.nan  # the limits are too close together to be told apart
         mean = float((w * z).sum()) / mass
         variance = float((w * (z - mean) ** 2).sum()) / mass
         return mass, self.centre + self.spread * mean, self.spread * math.sqrt(variance)
@@ -458,10 +460,10 @@ class _Entry:
         known = [*_FORMS, *(extra for form in _FORMS.values() for extra in form.extras)]
         for key in keys:
             if key not in known:
-                self._refuse(f"unknown key '{key[:40]}'{did_you_mean(key, known)}; allowed: {self._allowed()}")
+                self._refuse(f"unknown key {_show(key)}{did_you_mean(key, known)}; allowed: {self._allowed()}")
+        found = " and ".join(f"'{key}'" for key in keys) if keys else "an empty table"
         heads = [key for key in keys if key in _FORMS]
         if len(heads) != 1:
-            found = " and ".join(f"'{key}'" for key in keys) if keys else "an empty table"
             self._refuse(f"found {found}; allowed is exactly one of: {self._allowed()}")
         form = _FORMS[heads[0]]
         for key in keys:
@@ -488,9 +490,7 @@ class _Entry:
     def _beta(self, spec: dict[str, object]) -> Prior:
         a, b = self._pair(spec["beta"], "beta", "[a, b]")
         if min(a, b) < _BETA_MIN or max(a, b) > _BETA_MAX:
-            self._refuse(
-                f"found beta = [{a:.6g}, {b:.6g}]; allowed are two numbers from {_BETA_MIN:g} to {_BETA_MAX:g}"
-            )
+            self._refuse(f"found beta = [{a:.6g}, {b:.6g}]; allowed are two numbers from {_BETA_MIN:g} to {_BETA_MAX:g}")
         return Beta(a, b)
 
     def _mean_sd(self, spec: dict[str, object]) -> Prior:
@@ -499,10 +499,9 @@ class _Entry:
         mean, sd = self._number(spec["mean"], "mean"), self._number(spec["sd"], "sd")
         if not 0.0 < mean < 1.0:
             self._refuse(f"found mean = {mean:.6g}; allowed is a number between 0 and 1, ends excluded")
-        if not 0.0 < sd < (largest := math.sqrt(mean * (1.0 - mean))):
-            self._refuse(
-                f"found sd = {sd:.6g}; with mean = {mean:.6g} allowed is a number above 0 and below {largest:.4g}"
-            )
+        largest = math.sqrt(mean * (1.0 - mean))
+        if not 0.0 < sd < largest:
+            self._refuse(f"found sd = {sd:.6g}; with mean = {mean:.6g} allowed is a number above 0 and below {largest:.4g}")
         k = mean * (1.0 - mean) / sd / sd - 1.0
         a, b = mean * k, (1.0 - mean) * k
         if min(a, b) < _BETA_MIN or max(a, b) > _BETA_MAX:

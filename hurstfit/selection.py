@@ -5,8 +5,8 @@ galaxies star-forming and a share v of the star-forming ones quiescent, labels a
 
     p = [ f r (1 - u) + (1 - f) v ] / [ f r + (1 - f) ],      r = C_q / C_s,
 
-where f is the true quiescent fraction.  Only the ratio r of the completenesses matters, and it may exceed 1.  For r = 1 this is the
-apparent prevalence of Rogan & Gladen (1978, Am. J. Epidemiol. 107, 71) with sensitivity 1 - u and specificity 1 - v.
+where f is the true quiescent fraction.  Only the ratio r of the completenesses matters, and it may exceed 1.  For r = 1 this
+is the apparent prevalence of Rogan & Gladen (1978, Am. J. Epidemiol. 107, 71) with sensitivity 1 - u and specificity 1 - v.
 """
 
 from __future__ import annotations
@@ -79,9 +79,10 @@ def counted_fraction(
         p, the broadcast shape.
     """
     f = np.asarray(fraction, dtype=float)
-    found = f * completeness_ratio
+    found = f * np.asarray(completeness_ratio, dtype=float)
     starforming = 1.0 - f
-    labelled = found * (1.0 - np.asarray(missed_fraction)) + starforming * contamination
+    missed, contaminating = np.asarray(missed_fraction, dtype=float), np.asarray(contamination, dtype=float)
+    labelled = found * (1.0 - missed) + starforming * contaminating
     return np.clip(labelled / (found + starforming), 0.0, 1.0)
 
 

@@ -1,7 +1,7 @@
 """Building a table: independent batches, run by any executor, kept as they come, averaged at the end.
 
-Batch k of a build with seed s draws from ``SeedSequence([s, noise]).spawn(...)[k]`` and nothing else, so the table does not depend
-on how many workers there are, nor on how often the build was interrupted.
+Batch k of a build with seed s draws from ``SeedSequence([s, noise]).spawn(...)[k]`` and nothing else, so the table does not
+depend on how many workers there are, nor on how often the build was interrupted.
 """
 
 from __future__ import annotations

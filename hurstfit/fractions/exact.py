@@ -1,9 +1,9 @@
 """Zero fractions that are known exactly, among all walks.
 
 A reflected walk is at zero after n steps if and only if none of the backward sums X_n, X_n + X_{n-1}, ..., X_n + ... + X_1 is
-positive.  For n <= 3 that orthant probability is elementary (Sheppard 1899); at H = 1/2 it is ``C(2n, n) / 4^n`` at every n (Sparre
-Andersen 1953; Feller, vol. II, ch. XII); and at H = 1 all type-I increments are equal, so that half of the walks rest at zero for
-ever and the other half never do.
+positive.  For n <= 3 that orthant probability is elementary (Sheppard 1899); at H = 1/2 it is ``C(2n, n) / 4^n`` at every n
+(Sparre Andersen 1953; Feller, vol. II, ch. XII); and at H = 1 all type-I increments are equal, so that half of the walks
+rest at zero for ever and the other half never do.
 """
 
 from __future__ import annotations

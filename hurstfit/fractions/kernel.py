@@ -97,7 +97,8 @@ def tally(
     floors : ndarray, shape (n_masses,)
         Increasing mass limits of the parent samples, the first one 0.
     thresholds : ndarray of float32, shape (n_thresholds,)
-        Increasing theta.  Single precision doubles the width of the vector units; a rate within 1e-7 of a threshold is rare enough.
+        Increasing theta.  Single precision doubles the width of the vector units; a rate within 1e-7 of a threshold is rare
+        enough.
     counts : ndarray of int, shape (n_windows, n_masses + 1, n_thresholds + 2)
         Added to.  Row i: walks that pass exactly the first i mass limits.  Column 0: at zero over the window; column j: not at
         zero and q at or above exactly the first j - 1 thresholds.

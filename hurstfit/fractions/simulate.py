@@ -2,9 +2,11 @@
 
 What makes it fast, and what it does to the errors:
 
-* one white spectrum serves every H (common random numbers), so errors are correlated over H as well as over steps and definitions;
+* one white spectrum serves every H (common random numbers), so errors are correlated over H as well as over steps and
+  definitions;
 * the real and imaginary part of a transform, each also with its sign reversed (antithetic), and for type I both halves of the
-  period are walks of their own, so that one transform of length 2n gives 4 (type II) or 8 (type I) walks that are not independent.
+  period are walks of their own, so that one transform of length 2n gives 4 (type II) or 8 (type I) walks that are not
+  independent.
 
 A batch's own binomial error would therefore be wrong.  Errors are taken only from the scatter of independent batches, see
 :mod:`hurstfit.fractions.table`.
@@ -142,9 +144,7 @@ def _split(spectrum: NDArray[np.complex64]) -> NDArray[np.float32]:
     return np.ascontiguousarray(np.stack([spectrum.real, spectrum.imag], axis=1))
 
 
-def _tally_block(
-    axes: TableAxes, recording: _Recording, masses: NDArray[np.float64], counts: NDArray[np.int64]
-) -> None:
+def _tally_block(axes: TableAxes, recording: _Recording, masses: NDArray[np.float64], counts: NDArray[np.int64]) -> None:
     thresholds = axes.thresholds.astype(np.float32)
     for j, n in enumerate(axes.steps):
         now = recording.slots[n]

@@ -1,9 +1,10 @@
 """The HDF5 file of a fraction table: the one place that knows its format.
 
 Root attributes: ``format`` = "hurstfit fraction table", ``format_version``, ``noise``, ``sha256``.  Group ``made_by``: one string
-attribute for each setting and version.  Data sets: ``h``, ``steps``, ``masses``, ``windows``, ``thresholds`` (the axes), ``values``
-and ``errors`` with the axes (H, steps, parent sample: all walks and then each of ``masses``, window, criterion: zero and then each
-of ``thresholds``).  Values and errors are stored to six decimals; exactly known values are put back to full precision on reading.
+attribute for each setting and version.  Data sets: ``h``, ``steps``, ``masses``, ``windows``, ``thresholds`` (the axes),
+``values`` and ``errors`` with the axes (H, steps, parent sample: all walks and then each of ``masses``, window, criterion:
+zero and then each of ``thresholds``).  Values and errors are stored to six decimals; exactly known values are put back to
+full precision on reading.
 """
 
 from __future__ import annotations
@@ -52,9 +53,7 @@ def write_table(path: Path, table: FractionTable) -> None:
             file[name] = getattr(table.axes, name)
         for name, array in (("values", values), ("errors", errors)):
             # to six decimals, bit-packed: a tenth of the size, far below any simulation error
-            file.create_dataset(
-                name, data=array, chunks=(1, *array.shape[1:]), scaleoffset=6, shuffle=True, compression="gzip"
-            )
+            file.create_dataset(name, data=array, chunks=(1, *array.shape[1:]), scaleoffset=6, shuffle=True, compression="gzip")
         stored = [file[name][...] for name in ("values", "errors")]
         file.attrs["sha256"] = _checksum(table.noise, table.axes, stored, table.made_by)
 

@@ -102,7 +102,7 @@ class FractionTable:
         window: float = 1.0,
         min_mass: float | None = None,
     ) -> NDArray[np.float64]:
-        """Simulation error (one standard deviation) of :meth:`fraction`, same parameters.
+        """Give the simulation error (one standard deviation) of :meth:`fraction`, same parameters.
 
         Errors at the nodes are interpolated linearly, which does not take credit for the averaging that interpolation does.
         """

@@ -8,7 +8,8 @@ import numpy as np
 import pytest
 from scipy.integrate import quad
 
-from hurstfit.clock import CosmicClock, cosmology_from
+from hurstfit.clock import CosmicClock
+from hurstfit.cosmology import cosmology_from
 
 WHERE = "test"
 REDSHIFTS = np.array([0.0, 0.1, 0.7, 1.5, 3.0, 6.0, 10.0, 20.0, 30.0])
@@ -70,9 +71,7 @@ def test_ages_in_a_flat_model_without_radiation_match_the_closed_form() -> None:
     np.testing.assert_allclose(clock.age(z), expected, rtol=1e-7)
 
 
-@pytest.mark.parametrize(
-    "spec", ["Planck18", {"H0": 70, "Om0": 0.3, "Ode0": 0.9}, {"H0": 70, "Om0": 0.3, "w0": -0.8, "wa": 0.5}]
-)
+@pytest.mark.parametrize("spec", ["Planck18", {"H0": 70, "Om0": 0.3, "Ode0": 0.9}, {"H0": 70, "Om0": 0.3, "w0": -0.8, "wa": 0.5}])
 def test_weights_are_those_of_the_comoving_volume_of_the_model(spec: object) -> None:
     model = cosmology_from(spec, where=WHERE)
     nodes = CosmicClock.build(model).bin_nodes([0.0, 0.2, 0.5, 2.0], [0.2, 0.5, 2.0, 6.0], order=6)

@@ -1,0 +1,144 @@
+"""The command line.
+
+Commands only parse, call the library and print.  Heavy imports happen inside the commands, so that ``--help`` answers at once.
+"""
+
+from __future__ import annotations
+
+import sys
+from collections.abc import Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Any
+
+import click
+
+from hurstfit.errors import HurstfitError
+
+__all__ = ["main"]
+
+
+class _Commands(click.Group):
+    """A group whose commands end a user's mistake in one sentence and exit status 2."""
+
+    def invoke(self, ctx: click.Context) -> Any:
+        """Run a command."""
+        try:
+            return super().invoke(ctx)
+        except HurstfitError as error:
+            click.echo(f"hurstfit: {error}", err=True)
+            ctx.exit(2)
+
+
+@click.group(cls=_Commands, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.version_option(package_name="hurstfit")
+def main() -> None:
+    """Measure the correlation (Hurst) exponent H of star formation histories from quiescent fractions.
+
+    Counts of quiescent galaxies in bins of redshift and stellar mass are compared with the share of non-negative
+    fractional random walks that rest at zero, selection effects included.
+    """
+
+
+@main.command()
+@click.argument("path", metavar="FILE", type=click.Path(path_type=Path))
+def vet(path: Path) -> None:
+    """Check FILE without sampling and say what it means.
+
+    FILE is a configuration (.toml), a measurement table (.ecsv, .csv), a fraction table or a run (.h5).
+    """
+    from hurstfit.digest.vetting import vet_lines
+
+    _say(vet_lines(path))
+
+
+@main.command()
+@click.argument("config", type=click.Path(path_type=Path))
+@click.option(
+    "--out", type=click.Path(path_type=Path), help="Run file to write. [default: [output] run, or CONFIG's name with .h5]"
+)
+@click.option("--overwrite", is_flag=True, help="Replace the run file if it exists.")
+def infer(config: Path, out: Path | None, overwrite: bool) -> None:
+    """Sample the posterior of H for CONFIG and write a run file."""
+    from hurstfit.digest.words import answer_lines, caution_lines, choice_lines, run_cautions, run_lines
+    from hurstfit.inference import infer_problem
+    from hurstfit.problem import load_problem
+
+    problem = load_problem(config)
+    path = out or Path(problem.loaded.config.output.run or f"{config.stem}.h5")
+    with _bar("sampling", problem.loaded.config.engine.max_steps, "moves") as bar:
+
+        def progress(moves: int, words: str) -> None:
+            bar.set_postfix_str(words, refresh=False)
+            bar.update(moves)
+
+        run = infer_problem(problem, path, overwrite=overwrite, progress=progress)
+    lines = ["", *answer_lines(run), "", "How", *run_lines(run), "", "What was fitted", *choice_lines(problem), ""]
+    lines += caution_lines(run_cautions(run))
+    _say([*lines, "", f"written: {path}   (next: hurstfit digest {path})"])
+
+
+@main.command()
+@click.argument("run", type=click.Path(path_type=Path))
+@click.option("--into", type=click.Path(path_type=Path), help="Folder to write into. [default: RUN's name with -digest]")
+@click.option("--overwrite", is_flag=True, help="Replace files of an earlier digest in the folder.")
+def digest(run: Path, into: Path | None, overwrite: bool) -> None:
+    """Write summary table and figures of RUN into a folder."""
+    from hurstfit.digest.folder import write_digest
+    from hurstfit.digest.words import answer_lines, caution_lines, run_cautions, run_lines
+    from hurstfit.runs.run import open_run
+
+    opened = open_run(run)
+    written = write_digest(opened, into or Path(f"{run.stem}-digest"), overwrite=overwrite)
+    _say([*answer_lines(opened), "", *run_lines(opened), *caution_lines(run_cautions(opened)), ""])
+    _say(f"written: {path}" for path in written)
+
+
+@main.command()
+@click.argument("noise", type=click.Choice(["type-I", "type-II"]))
+@click.option("--out", required=True, type=click.Path(path_type=Path), help="Fraction table to write.")
+@click.option("--batches", default=16, show_default=True, help="Independent batches; standard errors come from their scatter.")
+@click.option("--walks", default=131072, show_default=True, help="Walks of one batch, a multiple of 8192.")
+@click.option("--seed", default=1, show_default=True, help="Seed of the random numbers.")
+@click.option("--workers", default=1, show_default=True, type=click.IntRange(1), help="Processes; does not change the result.")
+@click.option("--overwrite", is_flag=True, help="Replace the table if it exists.")
+def tabulate(noise: str, out: Path, batches: int, walks: int, seed: int, workers: int, overwrite: bool) -> None:
+    """Simulate walks of NOISE and tabulate their quiescent fractions.
+
+    An interrupted build goes on where it stopped when the same command is given again.
+    """
+    from concurrent.futures import ProcessPoolExecutor
+
+    from hurstfit.files import require_writable
+    from hurstfit.fractions.axes import default_axes
+    from hurstfit.fractions.building import Build, remove_batches, run_build
+    from hurstfit.fractions.store import write_table
+
+    require_writable(out, overwrite=overwrite, what="fraction table")
+    build = Build(noise, default_axes(noise), batches, walks, seed)
+    folder = out.with_name(f"{out.name}.batches")
+    with _bar(f"{noise} table", batches, "batches") as bar, ProcessPoolExecutor(workers) as executor:
+        try:
+            table = run_build(build, folder, executor, bar.update, keep=2 * workers)
+        except KeyboardInterrupt:
+            executor.shutdown(wait=False, cancel_futures=True)
+            click.echo(f"\ninterrupted: finished batches are in {folder}; give the same command again to go on", err=True)
+            sys.exit(130)
+    write_table(out, table)
+    remove_batches(folder)
+    zero = table.errors[:, :, 0, 0, 0].max()
+    _say([f"written: {out}", f"largest standard error: {zero:.2g} (zero, all walks), {table.errors.max():.2g} (any definition)"])
+
+
+def _say(lines: Any) -> None:
+    for line in lines:
+        click.echo(line)
+
+
+@contextmanager
+def _bar(description: str, total: int, unit: str) -> Iterator[Any]:
+    from tqdm import tqdm
+
+    # disable=None: silent where standard error is not a terminal
+    with tqdm(total=total, desc=description, unit=f" {unit}", disable=None, dynamic_ncols=True, leave=False) as bar:
+        yield bar

@@ -1,0 +1,1 @@
+"""Digest: from a run to words, numbers and figures."""

@@ -1,0 +1,114 @@
+"""What `vet` says: everything about a file that can be known without sampling."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import numpy as np
+
+from hurstfit.digest.words import (
+    answer_lines,
+    bin_lines,
+    caution_lines,
+    choice_lines,
+    labelled,
+    parameter_lines,
+    run_cautions,
+    run_lines,
+)
+from hurstfit.errors import HurstfitError
+from hurstfit.fractions.store import read_table
+from hurstfit.measurements import Measurements, read_measurements
+from hurstfit.problem import load_problem
+from hurstfit.runs.run import open_run
+from hurstfit.runs.store import is_run_file
+
+__all__ = ["vet_lines"]
+
+
+def vet_lines(path: Path) -> list[str]:
+    """Check a file by its kind and describe it.
+
+    Parameters
+    ----------
+    path : Path
+        Configuration, measurement table, fraction table or run, told apart by their endings.
+
+    Returns
+    -------
+    list of str
+
+    Raises
+    ------
+    HurstfitError
+        With the first thing that is wrong.
+    """
+    if not path.exists():
+        raise HurstfitError(f"{path} does not exist")
+    kind = path.suffix.lower()
+    if kind == ".toml":
+        return _configuration(path)
+    if kind in (".ecsv", ".csv"):
+        return _measurements(read_measurements(path))
+    if kind in (".h5", ".hdf5"):
+        return _run(path) if is_run_file(path) else _fractions(path)
+    raise HurstfitError(
+        f"{path}: the ending {kind or '(none)'} says nothing about what it is; allowed are .toml (configuration), "
+        ".ecsv and .csv (measurements), .h5 (fraction table or run)"
+    )
+
+
+def _configuration(path: Path) -> list[str]:
+    problem = load_problem(path)
+    lines = [f"{path} is in order.", "", "What will be fitted", *choice_lines(problem), ""]
+    lines += [
+        *parameter_lines(problem),
+        "",
+        "Bins (step number at the centre of the priors of step and z_start)",
+        *bin_lines(problem),
+    ]
+    return [*lines, "", *caution_lines(problem.cautions)]
+
+
+def _measurements(measurements: Measurements) -> list[str]:
+    lines = [f"{measurements.path} is in order.", ""]
+    for study in measurements.studies:
+        mine = measurements.select(measurements.study == study)
+        lines += labelled(
+            "study",
+            f"{study}: {mine.n_bins} bins, redshift {mine.z_lo.min():g} to {mine.z_hi.max():g}, "
+            f"log mass {mine.logm_lo.min():g} to {mine.logm_hi.max():g}, {int(mine.n_quiescent.sum()):,} of {int(mine.n_total.sum()):,} galaxies quiescent",
+        )
+    falling = np.flatnonzero(~measurements.rising)
+    lines += labelled("bins", f"{measurements.n_bins} in all, {measurements.n_bins - falling.size} in the rising regime")
+    for i in falling:
+        lines += labelled("left out", f"{measurements.row_label(i)}: the mean SFR does not rise there (rising = false)")
+    return lines
+
+
+def _fractions(path: Path) -> list[str]:
+    table = read_table(path)
+    axes = table.axes
+    lines = [f"{path} is in order (checksum verified).", ""]
+    lines += labelled("noise", table.noise)
+    lines += labelled("H", f"{axes.h[0]:g} to {axes.h[-1]:g}, {axes.h.size} nodes")
+    lines += labelled("steps", f"{axes.steps[0]} to {axes.steps[-1]}, {axes.steps.size} nodes")
+    lines += labelled(
+        "parent samples", f"all walks, and formed mass above {', '.join(f'{m:g}' for m in axes.masses)} of the mean"
+    )
+    lines += labelled("windows", f"{', '.join(str(w) for w in axes.windows)} steps")
+    lines += labelled("criteria", f"zero, and rate below {', '.join(f'{t:g}' for t in axes.thresholds)} of the mean so far")
+    lines += labelled(
+        "standard error",
+        f"at most {table.errors[:, :, 0, 0, 0].max():.2g} (zero, all walks), {table.errors.max():.2g} (any definition)",
+    )
+    for key, value in table.made_by.items():
+        lines += labelled(key.replace("_", " "), value)
+    return lines
+
+
+def _run(path: Path) -> list[str]:
+    run = open_run(path)
+    lines = [f"{path} is in order (checksums verified).", "", *answer_lines(run), "", "How", *run_lines(run)]
+    lines += ["", "What was fitted", *choice_lines(run.problem), "", *parameter_lines(run.problem), ""]
+    return [*lines, *caution_lines(run_cautions(run))]

@@ -1,0 +1,212 @@
+"""Joint sampling of every parameter with an affine-invariant ensemble.
+
+The reference engine that anyone can understand: emcee (Foreman-Mackey et al. 2013, PASP 125, 306) over all parameters at once, in
+coordinates in which the prior is standard normal.  Up to five parameters walkers stretch (Goodman & Weare 2010); above, they move
+along differences of other walkers (differential evolution, ter Braak & Vrugt 2008), which loses less with dimension.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hurstfit.engines.convergence import Convergence, assess
+from hurstfit.errors import HurstfitError
+from hurstfit.posterior import Posterior
+
+__all__ = ["Chain", "JointSettings", "sample_joint"]
+
+#: Share of the chain, from its start, that is left out as warm-up.
+WARMUP_SHARE = 0.25
+#: Steps before convergence is first looked at.
+FIRST_LOOK = 500
+
+
+@dataclass(frozen=True)
+class JointSettings:
+    """How to sample and when to stop.
+
+    Attributes
+    ----------
+    seed : int
+        Seed of all random numbers.
+    walkers : int or None
+        Size of the ensemble; by default four times the number of parameters, at least 32.
+    max_steps : int
+        Steps of every walker after which sampling stops in any case.
+    target_ess : float
+        Bulk and tail effective sample size that every parameter must reach.
+    max_rhat : float
+        Rank-normalised split R-hat that no parameter may exceed.
+    """
+
+    seed: int = 1
+    walkers: int | None = None
+    max_steps: int = 100_000
+    target_ess: float = 2000.0
+    max_rhat: float = 1.01
+
+    def ensemble(self, dimension: int) -> int:
+        """Give the number of walkers for a number of parameters."""
+        return self.walkers if self.walkers is not None else max(32, 4 * dimension)
+
+
+@dataclass(frozen=True)
+class Chain:
+    """What an ensemble did.
+
+    Attributes
+    ----------
+    coordinates : ndarray, shape (steps, walkers, parameters)
+        Positions in sampling coordinates, warm-up included, every `thin`-th step.
+    log_probability : ndarray, shape (steps, walkers)
+        Log of likelihood times prior at each position.
+    accepted : ndarray of int, shape (walkers,)
+        Accepted proposals.
+    warmup : int
+        Leading steps that are not used.
+    thin : int
+        Ensemble moves for each stored step.
+    convergence : tuple of Convergence
+        Of every parameter, over the steps that are used.
+    converged : bool
+        Whether the stopping rule was met.
+    stopped : str
+        Why sampling stopped, in words.
+    """
+
+    coordinates: NDArray[np.float64]
+    log_probability: NDArray[np.float64]
+    accepted: NDArray[np.int64]
+    warmup: int
+    thin: int
+    convergence: tuple[Convergence, ...]
+    converged: bool
+    stopped: str
+
+
+def sample_joint(posterior: Posterior, settings: JointSettings, progress: Callable[[int, str], None] | None = None) -> Chain:
+    """Sample all parameters until the stopping rule holds or the step limit is reached.
+
+    Parameters
+    ----------
+    posterior : Posterior
+        What to sample.
+    settings : JointSettings
+        Seed, ensemble and stopping rule.
+    progress : callable, optional
+        Called with the number of moves since the last call, and how far convergence is, in words.
+
+    Returns
+    -------
+    Chain
+        Marked as not converged where the step limit was reached or the user interrupted.
+    """
+    import emcee
+
+    dimension = len(posterior.parameters)
+    walkers = settings.ensemble(dimension)
+    if walkers % 2 or walkers < 2 * dimension:
+        raise HurstfitError(
+            f"walkers must be an even number of at least {2 * dimension} for {dimension} parameters, not {walkers}"
+        )
+    streams = np.random.SeedSequence(settings.seed).spawn(2)
+    start = _starting_points(posterior, walkers, np.random.default_rng(streams[0]))
+    sampler = emcee.EnsembleSampler(walkers, dimension, posterior.log_probability, vectorize=True, moves=_moves(dimension))
+    # emcee draws from a legacy RandomState: seeded here from the run's own seed, so that nothing global enters
+    sampler.random_state = np.random.RandomState(np.random.MT19937(streams[1])).get_state()
+    thin = max(1, dimension // 3)
+    state: Any = start
+    look_at, stopped, converged = FIRST_LOOK, "", False
+    found: tuple[Convergence, ...] = ()
+    words = "warming up"
+    try:
+        while not stopped:
+            done = sampler.iteration * thin if sampler.iteration else 0
+            moves = min(look_at, settings.max_steps) - done
+            for state in sampler.sample(state, iterations=max(moves // thin, 1), thin_by=thin):  # noqa: B007, B020
+                if progress is not None:
+                    progress(thin, words)
+            found = _assess(sampler.get_chain(), posterior)
+            converged = _met(found, settings)
+            words = _how_far(found)
+            if converged:
+                stopped = "the stopping rule was met"
+            elif sampler.iteration * thin + thin > settings.max_steps:
+                stopped = f"the step limit of {settings.max_steps} was reached"
+            look_at = int(sampler.iteration * thin * 1.3)
+    except KeyboardInterrupt:
+        if sampler.iteration < 8:
+            raise
+        stopped = "the user interrupted"
+        found = _assess(sampler.get_chain(), posterior)
+    return Chain(
+        sampler.get_chain(),
+        sampler.get_log_prob(),
+        sampler.backend.accepted.astype(np.int64),
+        _warmup(sampler.iteration),
+        thin,
+        found,
+        converged,
+        stopped,
+    )
+
+
+def _moves(dimension: int) -> list[tuple[object, float]]:
+    import emcee
+
+    if dimension <= 5:
+        return [(emcee.moves.StretchMove(), 0.5), (emcee.moves.DEMove(), 0.5)]
+    return [(emcee.moves.DEMove(), 0.8), (emcee.moves.DESnookerMove(), 0.2)]
+
+
+def _starting_points(posterior: Posterior, walkers: int, rng: np.random.Generator) -> NDArray[np.float64]:
+    """Choose walkers among draws from the prior, by a likelihood tempered until enough of them count.
+
+    Starting from the prior finds every mode that has prior mass; tempering keeps walkers off its empty parts.
+    """
+    tried = rng.standard_normal((max(4096, 32 * walkers), len(posterior.parameters)))
+    log_likelihood = posterior.log_likelihood(posterior.physical(tried))
+    possible = np.isfinite(log_likelihood)
+    if possible.sum() < walkers:
+        raise HurstfitError(
+            "the prior and the data contradict each other: "
+            f"{possible.sum()} of {tried.shape[0]} draws from the prior are possible at all; widen the priors"
+        )
+    tried, log_likelihood = tried[possible], log_likelihood[possible] - log_likelihood[possible].max()
+    temper = 1.0
+    while True:
+        weights = np.exp(temper * log_likelihood)
+        if weights.sum() ** 2 / (weights**2).sum() >= min(2 * walkers, 0.5 * weights.size) or temper < 1e-12:
+            break
+        temper /= 2
+    if np.count_nonzero(weights) < walkers:
+        weights = np.ones_like(weights)
+    chosen = rng.choice(weights.size, size=walkers, replace=False, p=weights / weights.sum())
+    return tried[chosen]
+
+
+def _warmup(steps: int) -> int:
+    return int(WARMUP_SHARE * steps)
+
+
+def _assess(chain: NDArray[np.float64], posterior: Posterior) -> tuple[Convergence, ...]:
+    """Convergence of every parameter in its own units, without the warm-up."""
+    used = posterior.physical(chain[_warmup(chain.shape[0]) :])
+    return tuple(assess(used[..., i]) for i in range(used.shape[-1]))
+
+
+def _met(found: tuple[Convergence, ...], settings: JointSettings) -> bool:
+    return all(
+        c.rhat < settings.max_rhat and min(c.ess_bulk, c.ess_tail) > settings.target_ess for c in found
+    )  # a comparison with nan is false: what cannot be judged has not converged
+
+
+def _how_far(found: tuple[Convergence, ...]) -> str:
+    rhat = max(c.rhat for c in found)
+    ess = min(min(c.ess_bulk, c.ess_tail) for c in found)
+    return f"largest R-hat {rhat:.3f}, smallest ESS {ess:.0f}"

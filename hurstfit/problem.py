@@ -1,0 +1,225 @@
+"""A configuration brought together with its data: everything that an engine, a study or a digest needs.
+
+Whatever can be checked without sampling is checked here, so that `vet` and `infer` refuse the same things with the same words.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hurstfit.clock import Z_MAX, CosmicClock
+from hurstfit.config import LoadedConfig, load_config
+from hurstfit.cosmology import cosmology_from
+from hurstfit.errors import HurstfitError
+from hurstfit.fractions.definition import Definition, parse_criterion
+from hurstfit.fractions.store import load_table
+from hurstfit.fractions.table import FractionTable
+from hurstfit.measurements import Measurements, read_measurements
+from hurstfit.posterior import Parameter, Posterior
+from hurstfit.prediction import BinPrediction
+from hurstfit.priors import Prior, Uniform, parse_prior
+from hurstfit.selection import TERMS, SelectionTerms, parse_selection
+
+__all__ = ["Problem", "build_problem", "load_problem"]
+
+#: Step numbers are checked over the central share of the priors of the clock, all but this much on either side.
+NEGLIGIBLE = 1e-6
+
+
+@dataclass(frozen=True)
+class Problem:
+    """What is to be fitted.
+
+    Attributes
+    ----------
+    loaded : LoadedConfig
+        The configuration and where it came from.
+    measurements : Measurements
+        All rows of the measurement table.
+    used : ndarray of bool, shape (rows,)
+        Which rows are fitted.
+    table : FractionTable
+        The fraction table in use.
+    definition : Definition
+        Parent sample, criterion and window.
+    clock : CosmicClock
+        Cosmic ages.
+    posterior : Posterior
+        Likelihood and priors of the rows that are fitted.
+    step_numbers : tuple of float
+        Smallest and largest step number over the bins and over the prior of the clock.
+    cautions : tuple of str
+        What a reader of the result must know beforehand.
+    """
+
+    loaded: LoadedConfig
+    measurements: Measurements
+    used: NDArray[np.bool_]
+    table: FractionTable
+    definition: Definition
+    clock: CosmicClock
+    posterior: Posterior
+    step_numbers: tuple[float, float]
+    cautions: tuple[str, ...]
+
+    def left_out(self) -> list[str]:
+        """Say which rows are not fitted, and why."""
+        return [
+            f"{self.measurements.row_label(i)}: the mean SFR does not rise there (rising = false)"
+            for i in np.flatnonzero(~self.used)
+        ]
+
+
+def load_problem(source: str | Path | Mapping[str, Any]) -> Problem:
+    """Read a configuration and everything that it names.
+
+    Parameters
+    ----------
+    source : str, Path or mapping
+        See :func:`hurstfit.config.load_config`.
+
+    Raises
+    ------
+    HurstfitError
+        If anything is malformed, or does not fit together.
+    """
+    loaded = load_config(source)
+    return build_problem(loaded, read_measurements(loaded.folder / loaded.config.measurements.table))
+
+
+def build_problem(loaded: LoadedConfig, measurements: Measurements, table: FractionTable | None = None) -> Problem:
+    """Bring a configuration and its measurements together.
+
+    Parameters
+    ----------
+    loaded : LoadedConfig
+        Configuration.
+    measurements : Measurements
+        All rows of the measurement table.
+    table : FractionTable, optional
+        Fraction table to use instead of the one that the configuration names.
+
+    Returns
+    -------
+    Problem
+    """
+    config, name = loaded.config, loaded.name
+    used = measurements.rising | config.measurements.keep_not_rising
+    if not used.any():
+        raise HurstfitError(
+            f"{measurements.path}: every row has rising = false, so that no bin is left to fit; "
+            "set keep_not_rising = true in [measurements] to fit them all the same"
+        )
+    bins = measurements.select(used)
+    if table is None:
+        table = load_table(loaded.folder / config.walk.table if config.walk.table else config.walk.noise)
+    if table.noise != config.walk.noise:
+        raise HurstfitError(f"{name}, [walk] noise: found {config.walk.noise!r}, but the fraction table holds {table.noise}")
+    definition = Definition(
+        None if config.galaxies.min_mass == "all" else float(config.galaxies.min_mass),
+        parse_criterion(config.galaxies.criterion, f"{name}, [galaxies] criterion"),
+        config.galaxies.window,
+    )
+    try:
+        surface = table.surface(definition)
+    except HurstfitError as error:
+        raise HurstfitError(f"{name}, [galaxies]: {error}") from error
+    clock = CosmicClock.build(cosmology_from(config.clock.cosmology, where=f"{name}, [clock] cosmology"))
+    exponent = Parameter("H", _exponent_prior(loaded, table), "", "correlation (Hurst) exponent")
+    step_prior = parse_prior(config.clock.step, where=f"{name}, [clock] step", lo=0.0, hi=math.inf, lo_open=True)
+    step = Parameter("step", step_prior, "Myr", "time step of the walk")
+    start_prior = parse_prior(config.clock.z_start, where=f"{name}, [clock] z_start", lo=0.0, hi=Z_MAX)
+    z_start = Parameter("z_start", start_prior, "", "redshift at which walks start")
+    selection = parse_selection(config.selection, measurements.studies, where=name, table=measurements.path)
+    fixed = (float(step_prior.mean), float(start_prior.mean)) if step_prior.is_fixed and start_prior.is_fixed else None
+    prediction = BinPrediction(surface, clock, bins.z_lo, bins.z_hi, fixed)
+    cautions = _cautions(loaded, measurements, used, definition, selection)
+    numbers = _check_steps(name, bins, prediction, table, step_prior, start_prior, cautions)
+    posterior = Posterior(bins, prediction, exponent, step, z_start, selection)
+    if not posterior.parameters:
+        raise HurstfitError(f"{name}: every parameter is fixed, so that there is nothing to infer; give H a prior")
+    return Problem(loaded, measurements, used, table, definition, clock, posterior, numbers, tuple(cautions))
+
+
+def _exponent_prior(loaded: LoadedConfig, table: FractionTable) -> Prior:
+    lo, hi = float(table.axes.h[0]), float(table.axes.h[-1])
+    if loaded.config.exponent.prior is None:
+        return Uniform(lo, hi)
+    where = f"{loaded.name}, [exponent] prior ({table.noise} table, H from {lo:g} to {hi:g})"
+    return parse_prior(loaded.config.exponent.prior, where=where, lo=lo, hi=hi)
+
+
+def _cautions(
+    loaded: LoadedConfig,
+    measurements: Measurements,
+    used: NDArray[np.bool_],
+    definition: Definition,
+    selection: dict[str, SelectionTerms],
+) -> list[str]:
+    cautions = []
+    if definition.min_mass is None:
+        cautions.append(
+            "all walks are counted, also those that formed next to nothing; a catalogue selected by stellar mass holds none of "
+            "these, and its predicted fraction is lower: compare with min_mass = 0.1 in [galaxies]"
+        )
+    outside = int((used & ~measurements.rising).sum())
+    if outside:
+        cautions.append(
+            f"{outside} bins outside the rising regime are fitted because keep_not_rising = true: H may be biased there"
+        )
+    for study in measurements.select(used).studies:
+        silent = [term.replace("_", " ") for term in TERMS if term not in selection[study].stated]
+        if silent:
+            cautions.append(f"study {study}: no {', '.join(silent)} is stated; assumed perfect")
+    return cautions
+
+
+def _check_steps(
+    name: str,
+    bins: Measurements,
+    prediction: BinPrediction,
+    table: FractionTable,
+    step: Prior,
+    z_start: Prior,
+    cautions: list[str],
+) -> tuple[float, float]:
+    """Check that the table covers the step numbers of all bins; add cautions; return the range."""
+    tails = np.array([NEGLIGIBLE, 1 - NEGLIGIBLE])
+    steps, starts = step.ppf(tails), z_start.ppf(tails)
+    above = np.flatnonzero(bins.z_hi >= starts[1])
+    if above.size:
+        i = above[0]
+        raise HurstfitError(
+            f"{bins.path}, {bins.row_label(i)}: z_hi {bins.z_hi[i]:g} is not below the start of the walk, "
+            f"z_start = {starts[1]:g} at the latest ({name}, [clock])"
+        )
+    # a walk takes fewest steps when it starts late with long steps; bins above the latest start are impossible there
+    lowest, highest = prediction.step_range(np.array([steps[1], steps[0]]), np.array([starts[0], starts[1]]))
+    over = np.flatnonzero(highest > table.axes.steps[-1])
+    if over.size:
+        i = over[0]
+        raise HurstfitError(
+            f"{bins.path}, {bins.row_label(i)}: up to {highest[i]:.0f} steps "
+            f"({name}, [clock]: steps as short as {steps[0]:.4g} Myr), but the {table.noise} table holds up to {table.axes.steps[-1]}; allow only longer steps or make a longer table"
+        )
+    never = np.flatnonzero(highest < 1)
+    if never.size:
+        i = never[0]
+        raise HurstfitError(
+            f"{bins.path}, {bins.row_label(i)}: the walk has not taken its first step there for any step and z_start allowed "
+            f"({name}, [clock])"
+        )
+    some = np.flatnonzero(lowest < 1)
+    if some.size:
+        cautions.append(
+            f"{some.size} bins lie before the first step of the walk for part of the prior of step and z_start, "
+            "which is therefore excluded"
+        )
+    return float(max(lowest.min(), 0.0)), float(highest.max())

@@ -1,0 +1,1 @@
+"""Runs: what an inference leaves behind, as one HDF5 file."""
