@@ -42,8 +42,9 @@ def main(path: str) -> None:
     rows = []
     for study, (terms, z_edges, m_edges, first, fade) in STUDIES.items():
         for z_lo, z_hi in pairwise(z_edges):
-            prediction = BinPrediction(surface, clock, np.array([z_lo]), np.array([z_hi]), (TRUTH["step"], TRUTH["z_start"]))
-            fraction = prediction(np.array([TRUTH["H"]]), np.array([TRUTH["step"]]), np.array([TRUTH["z_start"]]))[0][0, 0]
+            edges = np.array([z_lo]), np.array([z_hi])
+            prediction = BinPrediction(surface, Definition(), clock, *edges, (TRUTH["step"], TRUTH["z_start"]))
+            fraction = prediction(*(np.array([TRUTH[name]]) for name in ("H", "step", "z_start")))[0][0, 0]
             for k, (m_lo, m_hi) in enumerate(pairwise(m_edges)):
                 rising = (study, z_lo, m_lo) != NOT_RISING
                 true = fraction if rising else fraction + (1 - fraction) * 0.3

@@ -16,6 +16,8 @@ if TYPE_CHECKING:
     from hurstfit.measurements import Measurements, read_measurements
     from hurstfit.runs.run import Run, open_run
 
+__version__ = "0.1.0"
+
 __all__ = [
     "FractionTable",
     "HurstfitError",

@@ -5,6 +5,7 @@ Commands only parse, call the library and print.  Heavy imports happen inside th
 
 from __future__ import annotations
 
+import errno
 import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -13,9 +14,24 @@ from typing import Any
 
 import click
 
-from hurstfit.errors import HurstfitError
+from hurstfit.errors import HurstfitError, did_you_mean
 
 __all__ = ["main"]
+
+
+def _complain(sentence: str) -> None:
+    """Print one line on standard error, whatever characters file names and keys hold."""
+    line = "".join(c if c.isprintable() else c.encode("unicode_escape").decode() for c in sentence)
+    click.echo(f"hurstfit: {line}", err=True)
+
+
+def _show_version(ctx: click.Context, _: click.Parameter, wanted: bool) -> None:
+    if wanted:
+        from hurstfit.versions import versions
+
+        found = versions()
+        click.echo(f"hurstfit {found.pop('hurstfit')} ({', '.join(f'{name} {version}' for name, version in found.items())})")
+        ctx.exit()
 
 
 class _Commands(click.Group):
@@ -26,12 +42,37 @@ class _Commands(click.Group):
         try:
             return super().invoke(ctx)
         except HurstfitError as error:
-            click.echo(f"hurstfit: {error}", err=True)
+            _complain(str(error))
             ctx.exit(2)
+        except click.exceptions.NoArgsIsHelpError:
+            raise
+        except click.UsageError as error:
+            command = error.ctx.command_path if error.ctx else ctx.command_path
+            _complain(f"{error.format_message()} (see {command} --help)")
+            ctx.exit(2)
+        except KeyboardInterrupt:
+            _complain("interrupted; nothing was written")
+            ctx.exit(130)
+        except OSError as error:
+            # a full disk, say; whoever stops reading our output is click's business
+            if error.errno == errno.EPIPE:
+                raise
+            _complain(f"{error.filename or 'a file'}: {error.strerror or error}")
+            ctx.exit(2)
+
+    def resolve_command(self, ctx: click.Context, args: list[str]) -> tuple[str | None, click.Command | None, list[str]]:
+        """Find a command, or say which one is nearest."""
+        if args and self.get_command(ctx, args[0]) is None and not args[0].startswith("-"):
+            commands = self.list_commands(ctx)
+            hint = did_you_mean(args[0], commands)
+            raise HurstfitError(f"unknown command {args[0]!r}{hint}; allowed are {', '.join(commands)}")
+        return super().resolve_command(ctx, args)
 
 
 @click.group(cls=_Commands, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
-@click.version_option(package_name="hurstfit")
+@click.option(
+    "--version", is_flag=True, is_eager=True, expose_value=False, callback=_show_version, help="Show versions and exit."
+)
 def main() -> None:
     """Measure the correlation (Hurst) exponent H of star formation histories from quiescent fractions.
 
@@ -61,6 +102,7 @@ def vet(path: Path) -> None:
 def infer(config: Path, out: Path | None, overwrite: bool) -> None:
     """Sample the posterior of H for CONFIG and write a run file."""
     from hurstfit.digest.words import answer_lines, caution_lines, choice_lines, run_cautions, run_lines
+    from hurstfit.engines.joint import INTERRUPTED
     from hurstfit.inference import infer_problem
     from hurstfit.problem import load_problem
 
@@ -76,6 +118,8 @@ def infer(config: Path, out: Path | None, overwrite: bool) -> None:
     lines = ["", *answer_lines(run), "", "How", *run_lines(run), "", "What was fitted", *choice_lines(problem), ""]
     lines += caution_lines(run_cautions(run))
     _say([*lines, "", f"written: {path}   (next: hurstfit digest {path})"])
+    if run.record.stopped == INTERRUPTED:
+        sys.exit(130)
 
 
 @main.command()
@@ -90,7 +134,7 @@ def digest(run: Path, into: Path | None, overwrite: bool) -> None:
 
     opened = open_run(run)
     written = write_digest(opened, into or Path(f"{run.stem}-digest"), overwrite=overwrite)
-    _say([*answer_lines(opened), "", *run_lines(opened), *caution_lines(run_cautions(opened)), ""])
+    _say([*answer_lines(opened), "", "How", *run_lines(opened), "", *caution_lines(run_cautions(opened)), ""])
     _say(f"written: {path}" for path in written)
 
 

@@ -5,6 +5,8 @@ Keys are checked here for their name and shape; what they mean together with the
 
 from __future__ import annotations
 
+import json
+import reprlib
 import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass
@@ -15,7 +17,12 @@ from pydantic import BaseModel, ConfigDict, Field, ValidationError
 
 from hurstfit.errors import HurstfitError, did_you_mean
 
-__all__ = ["Config", "LoadedConfig", "load_config"]
+__all__ = ["FEWEST_WALKERS", "Config", "LoadedConfig", "load_config", "to_toml"]
+
+#: Fewer walkers than this make no ensemble, however few parameters there are.
+FEWEST_WALKERS = 8
+
+_Name = Annotated[str, Field(min_length=1)]
 
 
 class _Table(BaseModel):
@@ -25,7 +32,7 @@ class _Table(BaseModel):
 class MeasurementsTable(_Table):
     """[measurements]: the table of counts."""
 
-    table: str
+    table: _Name
     keep_not_rising: bool = False
 
 
@@ -33,7 +40,7 @@ class WalkTable(_Table):
     """[walk]: the construction of the noise, and a fraction table other than the one that ships."""
 
     noise: Literal["type-I", "type-II"]
-    table: str | None = None
+    table: _Name | None = None
 
 
 class GalaxiesTable(_Table):
@@ -42,6 +49,9 @@ class GalaxiesTable(_Table):
     min_mass: Literal["all"] | Annotated[float, Field(ge=0)] = "all"
     criterion: str = "zero"
     window: Annotated[float, Field(gt=0)] = 1.0
+    window_unit: Literal["steps", "Myr"] = "steps"
+    scatter: Annotated[float, Field(ge=0, le=1)] = 0.0
+    returned_fraction: Annotated[float, Field(ge=0, lt=1)] | None = None
 
 
 class ClockTable(_Table):
@@ -70,7 +80,7 @@ class EngineTable(_Table):
 
     kind: Literal["joint"] = "joint"
     seed: Annotated[int, Field(ge=0)] = 1
-    walkers: Annotated[int, Field(ge=8)] | None = None
+    walkers: Annotated[int, Field(ge=FEWEST_WALKERS)] | None = None
     max_steps: Annotated[int, Field(ge=100)] = 100_000
     target_ess: Annotated[float, Field(ge=100)] = 2000.0
     max_rhat: Annotated[float, Field(gt=1.0, le=1.1)] = 1.01
@@ -79,7 +89,7 @@ class EngineTable(_Table):
 class OutputTable(_Table):
     """[output]: the run file, relative to the directory that the command runs in."""
 
-    run: str | None = None
+    run: _Name | None = None
 
 
 class Config(_Table):
@@ -136,16 +146,16 @@ def load_config(source: str | Path | Mapping[str, Any]) -> LoadedConfig:
         If it cannot be read, or a key is unknown, missing or malformed.
     """
     if isinstance(source, Mapping):
-        contents, name, folder = dict(source), "configuration", Path()
-        text = to_toml(contents)
+        # read back from its own text: what is fitted is exactly what the run keeps, numpy's numbers and paths included
+        name, folder, text = "configuration", Path(), to_toml(source)
     else:
         path = Path(source)
         name, folder = str(path), path.parent
         text = _read_text(path)
-        try:
-            contents = tomllib.loads(text)
-        except tomllib.TOMLDecodeError as error:
-            raise HurstfitError(f"{path} is not valid TOML: {error}") from error
+    try:
+        contents = tomllib.loads(text)
+    except (tomllib.TOMLDecodeError, RecursionError) as error:
+        raise HurstfitError(f"{name} is not valid TOML: {error}") from error
     try:
         return LoadedConfig(Config.model_validate(contents), name, folder, text)
     except ValidationError as error:
@@ -175,34 +185,32 @@ def to_toml(contents: Mapping[str, Any]) -> str:
     """
 
     def value(x: Any) -> str:
+        if hasattr(x, "tolist"):
+            x = x.tolist()
         if isinstance(x, bool):
             return "true" if x else "false"
         if isinstance(x, int | float):
             return repr(x)
-        if isinstance(x, str):
-            escaped = x.replace("\\", "\\\\").replace('"', '\\"').replace("\n", "\\n").replace("\t", "\\t")
-            return f'"{escaped}"'
-        if isinstance(x, Path):
-            return value(str(x))
+        if isinstance(x, str | Path):
+            # JSON's escapes are TOML's, except that TOML wants the delete character escaped too
+            return json.dumps(str(x), ensure_ascii=False).replace("\x7f", "\\u007f")
         if isinstance(x, list | tuple):
             return f"[{', '.join(map(value, x))}]"
         if isinstance(x, Mapping):
-            return "{ " + ", ".join(f"{value(str(k))} = {value(v)}" for k, v in x.items()) + " }"
-        if hasattr(x, "item"):
-            return value(x.item())
+            return "{ " + ", ".join(f"{value(str(k))} = {value(v)}" for k, v in x.items() if v is not None) + " }"
         raise HurstfitError(f"configuration: {x!r} of type {type(x).__name__} has no TOML form")
 
-    lines = []
+    # what stands outside all tables has to come before them
+    lines = [f"{value(str(k))} = {value(v)}" for k, v in contents.items() if not isinstance(v, Mapping) and v is not None]
     for table, body in contents.items():
-        if not isinstance(body, Mapping):
-            lines.append(f"{value(table)} = {value(body)}")
-            continue
-        lines += ["", f"[{value(str(table))}]", *(f"{value(str(k))} = {value(v)}" for k, v in body.items() if v is not None)]
+        if isinstance(body, Mapping):
+            lines += ["", f"[{value(str(table))}]", *(f"{value(str(k))} = {value(v)}" for k, v in body.items() if v is not None)]
     return "\n".join(lines).lstrip() + "\n"
 
 
 _SIMPLE = {
     "string_type": "text in quotes",
+    "string_too_short": "text that is not empty",
     "bool_type": "true or false",
     "int_type": "a whole number",
     "float_type": "a number",
@@ -213,26 +221,34 @@ _SIMPLE = {
 
 
 def _sentence(name: str, error: ValidationError) -> str:
-    """Turn the first validation error into one sentence."""
-    first = error.errors()[0]
-    # members of a union are tried in turn and each leaves its own error; the place in the file is what they share
-    place = [str(part) for part in first["loc"] if not str(part).startswith(("literal[", "constrained-", "function-"))]
-    place = [part for part in place if part not in ("float", "str", "int", "dict[str,any]")]
+    """Turn the gravest validation error into one sentence."""
+    # an unknown key first: it is often why another one is missing
+    errors = sorted(error.errors(), key=lambda e: e["type"] != "extra_forbidden")
+    first = errors[0]
+    # beyond a table and its key, the place only says which member of a union was tried
+    place = [str(part) for part in first["loc"][:2]]
     table, key = place[0], ".".join(place[1:])
     where = f"{name}, [{table}]" + (f" {key}" if key else "")
-    kind = first["type"]
-    if kind == "extra_forbidden":
+    if first["type"] == "extra_forbidden":
         model = Config.model_fields.get(table) if key else None
         allowed = list(model.annotation.model_fields if model else Config.model_fields)  # type: ignore[union-attr]
-        word = place[-1]
-        inside = f", [{table}]" if key else ""
-        what = "key" if key else "table"
-        return f"{name}{inside}: unknown {what} {word!r}; allowed are {', '.join(allowed)}{did_you_mean(word, allowed)}"
-    if kind == "missing":
+        inside, what = (f", [{table}]", "key") if key else ("", "table")
+        hint = did_you_mean(place[-1], allowed)
+        return f"{name}{inside}: unknown {what} {place[-1]!r}{hint}; allowed are {', '.join(allowed)}"
+    if first["type"] == "missing":
         return f"{where} is missing" if key else f"{name}: the table [{table}] is missing"
-    alternatives = [e for e in error.errors() if e["loc"][:2] == first["loc"][:2]]
+    alternatives = [e for e in errors if e["loc"][:2] == first["loc"][:2]]
     admitted = " or ".join(dict.fromkeys(_allowed(e) for e in alternatives))
-    return f"{where}: found {first['input']!r}, allowed is {admitted}"
+    words = [word for e in alternatives if e["type"] == "literal_error" for word in str(e["ctx"]["expected"]).split("'")[1::2]]
+    hint = did_you_mean(first["input"], words) if isinstance(first["input"], str) else ""
+    return f"{where}: found {_show(first['input'])}, allowed is {admitted}{hint}"
+
+
+def _show(value: object) -> str:
+    """Say what was found, briefly and as the file writes it."""
+    if isinstance(value, bool):
+        return "true" if value else "false"
+    return "a table" if isinstance(value, dict) else reprlib.repr(value)
 
 
 def _allowed(error: Any) -> str:
@@ -241,7 +257,12 @@ def _allowed(error: Any) -> str:
         return str(context["expected"])
     if kind in _SIMPLE:
         return _SIMPLE[kind]
-    bounds = {"greater_than_equal": ("ge", "at least"), "greater_than": ("gt", "above"), "less_than_equal": ("le", "at most")}
+    bounds = {
+        "less_than": ("lt", "below"),
+        "greater_than_equal": ("ge", "of at least"),
+        "greater_than": ("gt", "above"),
+        "less_than_equal": ("le", "of at most"),
+    }
     if kind in bounds:
         key, words = bounds[kind]
         return f"a number {words} {context[key]:g}"

@@ -10,7 +10,7 @@ from pathlib import Path
 
 from hurstfit.errors import HurstfitError
 
-__all__ = ["require_writable", "written_aside"]
+__all__ = ["require_writable", "require_writable_folder", "written_aside"]
 
 
 def require_writable(path: Path, *, overwrite: bool, what: str) -> None:
@@ -32,12 +32,39 @@ def require_writable(path: Path, *, overwrite: bool, what: str) -> None:
     """
     if path.is_dir():
         raise HurstfitError(f"{what} {path} is a directory; name a file")
-    if path.exists() and not overwrite:
-        raise HurstfitError(f"{what} {path} exists and is not overwritten; name another file or give --overwrite")
     if not path.parent.is_dir():
         raise HurstfitError(f"{what} {path} cannot be written: there is no directory {path.parent}")
-    if not os.access(path.parent, os.W_OK | os.X_OK):
-        raise HurstfitError(f"{what} {path} cannot be written: the directory {path.parent} is not writable")
+    if os.path.lexists(path) and not overwrite:
+        raise HurstfitError(f"{what} {path} exists and is not overwritten; name another file or give --overwrite")
+    require_writable_folder(path.parent, f"{what} {path}", path.name)
+
+
+def require_writable_folder(folder: Path, what: str, name: str = "file") -> None:
+    """Refuse a folder in which no file of a given name can be made, by making one.
+
+    Permissions alone do not tell: the superuser has them all, on a file system that is read-only too.
+
+    Parameters
+    ----------
+    folder : Path
+        Existing folder.
+    what : str
+        What is to be written, for the message.
+    name : str
+        Name of the file that is to be made; the trial's is a little longer.
+
+    Raises
+    ------
+    HurstfitError
+        If it cannot.
+    """
+    trial = _aside(folder / name)
+    try:
+        trial.touch(exist_ok=False)
+        trial.unlink()
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or str(error)
+        raise HurstfitError(f"{what} cannot be written: the directory {folder} is not writable ({reason})") from error
 
 
 @contextmanager
@@ -49,7 +76,7 @@ def written_aside(path: Path) -> Iterator[Path]:
     Path
         Temporary file in the same directory; it is removed if the block fails.
     """
-    aside = path.with_name(f".{path.name}.{secrets.token_hex(4)}.tmp")
+    aside = _aside(path)
     try:
         yield aside
         with open(aside, "rb") as handle:
@@ -57,3 +84,7 @@ def written_aside(path: Path) -> Iterator[Path]:
         os.replace(aside, path)
     finally:
         aside.unlink(missing_ok=True)
+
+
+def _aside(path: Path) -> Path:
+    return path.with_name(f".{path.name}.{secrets.token_hex(4)}.tmp")

@@ -9,13 +9,17 @@ from pathlib import Path
 from typing import Any
 
 from hurstfit.engines.joint import Chain, JointSettings, sample_joint
+from hurstfit.errors import HurstfitError
 from hurstfit.files import require_writable
 from hurstfit.problem import Problem, load_problem
 from hurstfit.runs.run import Run
-from hurstfit.runs.store import RunRecord, write_run
+from hurstfit.runs.store import RunRecord, is_run_file, write_run
 from hurstfit.versions import versions
 
 __all__ = ["infer", "infer_problem"]
+
+#: What a run file may be called if it is to replace something that is no run: never a table or a configuration.
+RUN_ENDINGS = (".h5", ".hdf5")
 
 
 def infer(
@@ -58,6 +62,8 @@ def infer_problem(
     """Sample a problem, write its run file where `path` is given, and return the run; parameters as in :func:`infer`."""
     if path is not None:
         require_writable(path, overwrite=overwrite, what="run file")
+        if path.exists() and path.suffix.lower() not in RUN_ENDINGS and not is_run_file(path):
+            raise HurstfitError(f"{path} is not a run file, so that it is not replaced by one; name another file")
     engine = problem.loaded.config.engine
     settings = JointSettings(engine.seed, engine.walkers, engine.max_steps, engine.target_ess, engine.max_rhat)
     begun = time.perf_counter()
@@ -92,6 +98,8 @@ def _record(problem: Problem, settings: JointSettings, chain: Chain, seconds: fl
         warmup=chain.warmup,
         versions=versions(),
         names=posterior.names,
+        units=tuple(p.unit for p in posterior.parameters),
+        descriptions=tuple(p.description for p in posterior.parameters),
         draws=posterior.physical(kept),
         log_likelihood=chain.log_probability[chain.warmup :] - posterior.log_prior(kept),
         coordinates=chain.coordinates,

@@ -18,6 +18,7 @@ from hurstfit.counts import BinomialCounts
 from hurstfit.measurements import Measurements
 from hurstfit.prediction import BinPrediction
 from hurstfit.priors import Prior
+from hurstfit.quantiles import Quantiles
 from hurstfit.selection import TERMS, SelectionTerms, counted_fraction
 
 __all__ = ["Parameter", "Posterior"]
@@ -96,12 +97,15 @@ class Posterior:
         values = np.array([q.prior.mean if q.prior.is_fixed else np.nan for q in self.quantities])
         return free, values
 
+    @cached_property
+    def _quantiles(self) -> Quantiles:
+        return Quantiles(tuple(p.prior for p in self.parameters))
+
     # -- coordinates -----------------------------------------------------------------------------------------------------------
 
     def physical(self, coordinates: Array) -> Array:
         """Turn sampling coordinates into parameters, both of shape (..., parameters)."""
-        columns = [p.prior.from_normal(coordinates[..., i]) for i, p in enumerate(self.parameters)]
-        return np.stack(columns, axis=-1) if columns else np.zeros(coordinates.shape)
+        return self._quantiles(coordinates)
 
     def coordinates(self, physical: Array) -> Array:
         """Turn parameters into sampling coordinates, both of shape (..., parameters)."""
@@ -161,5 +165,6 @@ class Posterior:
         Returns
         -------
         ndarray, shape (vectors,)
+            -inf where a vector is impossible.
         """
         return self.log_prior(coordinates) + self.log_likelihood(self.physical(coordinates))

@@ -13,10 +13,20 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from hurstfit.clock import CosmicClock
-from hurstfit.fractions.spline import Surface, spline_basis
+from hurstfit.clock import BinNodes, CosmicClock
+from hurstfit.fractions.definition import Definition
+from hurstfit.fractions.spline import Surface
 
 __all__ = ["BinPrediction"]
+
+Array = NDArray[np.float64]
+
+#: Relative error of the average over a bin that is good enough: a hundredth of the table's own error.
+AVERAGING = 1e-5
+#: Points that a bin is averaged over at most.
+MOST_POINTS = 16
+#: A proposal far out in the tail of the prior may be a step of zero; no step is shorter than this, in Myr.
+SHORTEST_STEP = 1e-6
 
 
 @dataclass(frozen=True)
@@ -26,41 +36,98 @@ class BinPrediction:
     Attributes
     ----------
     surface : Surface
-        Fraction over H and step number, for the definition in force.
+        Fraction over H and the walk, for the definition in force.
+    definition : Definition
+        Window, and threshold where it follows the clock.
     clock : CosmicClock
         Cosmic ages.
     z_lo, z_hi : ndarray, shape (bins,)
         Redshift ranges.
     fixed_clock : tuple of float, or None
         (step in Myr, z_start) where both are fixed, which makes the prediction much faster.
+    latest_start : float, or None
+        Redshift after which walks hardly ever start, by which the points within a bin are chosen.
     """
 
     surface: Surface
+    definition: Definition
     clock: CosmicClock
-    z_lo: NDArray[np.float64]
-    z_hi: NDArray[np.float64]
+    z_lo: Array
+    z_hi: Array
     fixed_clock: tuple[float, float] | None = None
+    latest_start: float | None = None
 
     @cached_property
-    def _nodes(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        """Cosmic ages (Myr) and weights of the points that a bin is averaged over, both (bins, points)."""
-        nodes = self.clock.bin_nodes(self.z_lo, self.z_hi)
-        return self.clock.age(nodes.z), nodes.weight
+    def _nodes(self) -> tuple[Array, Array]:
+        """Cosmic ages (Myr) and weights of the points that a bin is averaged over, both (bins, points).
+
+        Bins are mostly narrow: the fewest points that average powers of the walk's age to :data:`AVERAGING` do, as zero fractions
+        go with such powers.  They vary fastest for the walks that start last.
+        """
+        start = self.fixed_clock[1] if self.fixed_clock is not None else self.latest_start
+        born = float(self.clock.age(start)) if start is not None else 0.0
+
+        def averages(nodes: BinNodes) -> Array:
+            # a bin that the latest walks have only just reached, or not yet, is no reason for points without end
+            ages = self.clock.age(nodes.z)
+            return nodes.average(np.maximum(ages - born, 0.05 * ages) ** np.array([-1.0, -0.5, 0.5])[:, None, None])
+
+        most = self.clock.bin_nodes(self.z_lo, self.z_hi, order=MOST_POINTS)
+        for order in range(2, MOST_POINTS):
+            nodes = self.clock.bin_nodes(self.z_lo, self.z_hi, order=order)
+            if np.all(np.abs(averages(nodes) / averages(most) - 1.0) < AVERAGING):
+                return self.clock.age(nodes.z), nodes.weight
+        return self.clock.age(most.z), most.weight
 
     @cached_property
-    def _fixed(self) -> tuple[NDArray[np.float64], bool]:
-        """Coefficients of the H-splines of every bin, (n_h, bins), with a fixed clock; and whether n >= 1 everywhere."""
+    def _fixed(self) -> tuple[Array, bool]:
+        """Coefficients of the H-splines of every bin, (n_h, bins), with a fixed clock; and whether the table covers all bins."""
         assert self.fixed_clock is not None
         ages, weights = self._nodes
-        step, z_start = self.fixed_clock
-        steps = (ages - self.clock.age(np.array(z_start))) / step
-        averaging = np.einsum("bk,bkn->bn", weights, self.surface.step_basis(steps))
-        return self.surface.coefficients @ averaging.T, bool(np.all(steps >= 1.0))
+        steps, window, threshold = self.walks(ages, *(np.array([x]) for x in self.fixed_clock))
+        # what lies outside is marked as impossible below; here it only has to be a number
+        within = np.clip(steps, *self.surface.step_limits)
+        averaging = np.einsum("bk,bknst->bnst", weights, self.surface.walk_basis(within, window, threshold)[0])
+        coefficients = np.einsum("hnst,bnst->hb", self.surface.coefficients, averaging)
+        return coefficients, bool(self._possible(steps)[0])
 
-    def step_range(
-        self, step: NDArray[np.float64], z_start: NDArray[np.float64]
-    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        """Smallest and largest step number that each bin reaches at its edges, over given clocks.
+    def walks(self, ages: Array, step: Array, z_start: Array) -> tuple[Array, Array, Array]:
+        """Describe the walks seen at given cosmic ages under given clocks.
+
+        Parameters
+        ----------
+        ages : ndarray, shape (...)
+            Cosmic ages in Myr.
+        step, z_start : ndarray, shape (vectors,)
+            Step length in Myr, and redshift at which walks start.
+
+        Returns
+        -------
+        steps, window, threshold : ndarray, shapes that broadcast to (vectors, ...)
+            Step number; tracer window in steps; theta.
+        """
+        shape = (-1, *(1,) * ages.ndim)
+        length = np.maximum(step, SHORTEST_STEP).reshape(shape)
+        walked = ages - self.clock.age(z_start).reshape(shape)
+        window = np.full((1, *shape[1:]), self.definition.window)
+        if self.definition.window_unit == "Myr":
+            window = window / length
+        threshold = np.ones((1, *shape[1:]))
+        criterion = self.definition.criterion
+        if criterion.kind == "ssfr":
+            # (SFR / surviving mass) x cosmic age < T  <=>  SFR / mean SFR < T (1 - R) x age of the walk / cosmic age
+            ratio = np.maximum(walked, SHORTEST_STEP) / ages
+            threshold = criterion.limit * (1.0 - self.definition.returned_fraction) * ratio
+        return walked / length, window, threshold
+
+    def _possible(self, steps: Array) -> NDArray[np.bool_]:
+        """Tell which vectors keep every bin between the first step and the end of the table."""
+        lowest, highest = self.surface.step_limits
+        inside = (steps >= lowest * (1 - 1e-12)) & (steps <= highest * (1 + 1e-12))
+        return np.all(inside, axis=tuple(range(1, steps.ndim)))
+
+    def step_range(self, step: Array, z_start: Array) -> tuple[Array, Array]:
+        """Give the smallest and largest step number that each bin reaches at its edges, over given clocks.
 
         Parameters
         ----------
@@ -76,9 +143,12 @@ class BinPrediction:
         latest = (self.clock.age(self.z_lo)[None, :] - start) / step[:, None]
         return earliest.min(axis=0), latest.max(axis=0)
 
-    def __call__(
-        self, H: NDArray[np.float64], step: NDArray[np.float64], z_start: NDArray[np.float64]
-    ) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
+    def threshold_range(self, z_start: Array) -> tuple[float, float]:
+        """Give the smallest and largest theta over the bins, for given starts of the walks."""
+        _, _, threshold = self.walks(self._nodes[0], np.ones(z_start.size), z_start)
+        return float(threshold.min()), float(threshold.max())
+
+    def __call__(self, H: Array, step: Array, z_start: Array) -> tuple[Array, NDArray[np.bool_]]:
         """Predict every bin for many parameter vectors.
 
         Parameters
@@ -93,18 +163,19 @@ class BinPrediction:
         possible : ndarray of bool, shape (vectors,)
             False where a bin lies before the first step (n < 1) or beyond the table: there the likelihood is zero.
         """
-        in_h = self.surface.h_basis(H)
         if self.fixed_clock is not None:
-            coefficients, reached = self._fixed
-            return np.clip(in_h @ coefficients, 0.0, 1.0), np.full(H.shape, reached)
+            coefficients, covered = self._fixed
+            return np.clip(self.surface.h_basis(H) @ coefficients, 0.0, 1.0), np.full(H.shape, covered)
         ages, weights = self._nodes
-        # a proposal far out in the tail of the prior may be a step of zero
-        lengths = np.maximum(step, 1e-6)[:, None, None]
-        steps = (ages[None] - self.clock.age(z_start)[:, None, None]) / lengths
-        nodes = self.surface.steps
-        possible = np.all((steps >= nodes[0]) & (steps <= nodes[-1]), axis=(1, 2))
-        rows = in_h @ self.surface.coefficients
-        first, basis = spline_basis(self.surface.step_knots, np.log(np.clip(steps, nodes[0], nodes[-1])))
-        flat = first.reshape(H.size, -1)
-        gathered = sum(np.take_along_axis(rows, flat + b, axis=1).reshape(first.shape) * basis[..., b] for b in range(4))
-        return np.clip(np.einsum("wbk,bk->wb", gathered, weights), 0.0, 1.0), possible
+        steps, window, threshold = self.walks(ages, step, z_start)
+        lowest, highest = self.surface.step_limits
+        rows = self.surface.at_exponents(H)
+        fraction = self.surface.along_walk(rows, np.clip(steps, lowest, highest), window, threshold)
+        return np.clip(np.einsum("wbk,bk->wb", fraction, weights), 0.0, 1.0), self._possible(steps)
+
+    def at_redshifts(self, H: Array, step: Array, z_start: Array, z: Array) -> Array:
+        """Predict the fraction at single redshifts, shape (vectors, z), walks kept within the table."""
+        steps, window, threshold = self.walks(self.clock.age(z), step, z_start)
+        lowest, highest = self.surface.step_limits
+        fraction = self.surface(H[:, None], np.clip(steps, lowest, highest), window, threshold)
+        return np.clip(fraction, 0.0, 1.0)

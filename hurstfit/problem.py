@@ -15,8 +15,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hurstfit.clock import Z_MAX, CosmicClock
-from hurstfit.config import LoadedConfig, load_config
+from hurstfit.config import FEWEST_WALKERS, LoadedConfig, load_config
 from hurstfit.cosmology import cosmology_from
+from hurstfit.coverage import TAILS, check_steps, check_thresholds
 from hurstfit.errors import HurstfitError
 from hurstfit.fractions.definition import Definition, parse_criterion
 from hurstfit.fractions.store import load_table
@@ -28,9 +29,6 @@ from hurstfit.priors import Prior, Uniform, parse_prior
 from hurstfit.selection import TERMS, SelectionTerms, parse_selection
 
 __all__ = ["Problem", "build_problem", "load_problem"]
-
-#: Step numbers are checked over the central share of the priors of the clock, all but this much on either side.
-NEGLIGIBLE = 1e-6
 
 
 @dataclass(frozen=True)
@@ -122,11 +120,7 @@ def build_problem(loaded: LoadedConfig, measurements: Measurements, table: Fract
         table = load_table(loaded.folder / config.walk.table if config.walk.table else config.walk.noise)
     if table.noise != config.walk.noise:
         raise HurstfitError(f"{name}, [walk] noise: found {config.walk.noise!r}, but the fraction table holds {table.noise}")
-    definition = Definition(
-        None if config.galaxies.min_mass == "all" else float(config.galaxies.min_mass),
-        parse_criterion(config.galaxies.criterion, f"{name}, [galaxies] criterion"),
-        config.galaxies.window,
-    )
+    definition = _definition(loaded)
     try:
         surface = table.surface(definition)
     except HurstfitError as error:
@@ -139,13 +133,46 @@ def build_problem(loaded: LoadedConfig, measurements: Measurements, table: Fract
     z_start = Parameter("z_start", start_prior, "", "redshift at which walks start")
     selection = parse_selection(config.selection, measurements.studies, where=name, table=measurements.path)
     fixed = (float(step_prior.mean), float(start_prior.mean)) if step_prior.is_fixed and start_prior.is_fixed else None
-    prediction = BinPrediction(surface, clock, bins.z_lo, bins.z_hi, fixed)
-    cautions = _cautions(loaded, measurements, used, definition, selection)
-    numbers = _check_steps(name, bins, prediction, table, step_prior, start_prior, cautions)
+    latest = float(start_prior.ppf(TAILS[0]))
+    prediction = BinPrediction(surface, definition, clock, bins.z_lo, bins.z_hi, fixed, latest)
+    numbers, cautions = check_steps(name, bins, prediction, table, step_prior, start_prior)
+    check_thresholds(name, prediction, table, start_prior)
+    cautions = [*_cautions(measurements, used, definition, selection), *cautions]
     posterior = Posterior(bins, prediction, exponent, step, z_start, selection)
-    if not posterior.parameters:
-        raise HurstfitError(f"{name}: every parameter is fixed, so that there is nothing to infer; give H a prior")
+    _check_ensemble(loaded, len(posterior.parameters))
     return Problem(loaded, measurements, used, table, definition, clock, posterior, numbers, tuple(cautions))
+
+
+def _definition(loaded: LoadedConfig) -> Definition:
+    """Read who is counted and what counts as quiescent."""
+    galaxies, where = loaded.config.galaxies, f"{loaded.name}, [galaxies]"
+    criterion = parse_criterion(galaxies.criterion, f"{where} criterion")
+    if (criterion.kind == "ssfr") != (galaxies.returned_fraction is not None):
+        found = f"criterion {criterion} " + ("without" if galaxies.returned_fraction is None else "with")
+        raise HurstfitError(
+            f"{where} returned_fraction: found {found} a returned fraction; the criterion 'ssfr<...' needs one (the share of "
+            "the formed mass that stars have returned, say 0.4), and no other criterion takes one"
+        )
+    return Definition(
+        min_mass=None if galaxies.min_mass == "all" else float(galaxies.min_mass),
+        criterion=criterion,
+        window=galaxies.window,
+        window_unit=galaxies.window_unit,
+        scatter=galaxies.scatter,
+        returned_fraction=galaxies.returned_fraction or 0.0,
+    )
+
+
+def _check_ensemble(loaded: LoadedConfig, dimension: int) -> None:
+    """Refuse a problem without free parameters, and an ensemble that cannot move in all of them."""
+    if not dimension:
+        raise HurstfitError(f"{loaded.name}: every parameter is fixed, so that there is nothing to infer; give H a prior")
+    walkers, fewest = loaded.config.engine.walkers, max(FEWEST_WALKERS, 2 * dimension)
+    if walkers is not None and (walkers % 2 or walkers < fewest):
+        raise HurstfitError(
+            f"{loaded.name}, [engine] walkers: found {walkers}, allowed is an even number of at least {fewest} "
+            f"for {dimension} free parameters"
+        )
 
 
 def _exponent_prior(loaded: LoadedConfig, table: FractionTable) -> Prior:
@@ -157,11 +184,7 @@ def _exponent_prior(loaded: LoadedConfig, table: FractionTable) -> Prior:
 
 
 def _cautions(
-    loaded: LoadedConfig,
-    measurements: Measurements,
-    used: NDArray[np.bool_],
-    definition: Definition,
-    selection: dict[str, SelectionTerms],
+    measurements: Measurements, used: NDArray[np.bool_], definition: Definition, selection: dict[str, SelectionTerms]
 ) -> list[str]:
     cautions = []
     if definition.min_mass is None:
@@ -179,47 +202,3 @@ def _cautions(
         if silent:
             cautions.append(f"study {study}: no {', '.join(silent)} is stated; assumed perfect")
     return cautions
-
-
-def _check_steps(
-    name: str,
-    bins: Measurements,
-    prediction: BinPrediction,
-    table: FractionTable,
-    step: Prior,
-    z_start: Prior,
-    cautions: list[str],
-) -> tuple[float, float]:
-    """Check that the table covers the step numbers of all bins; add cautions; return the range."""
-    tails = np.array([NEGLIGIBLE, 1 - NEGLIGIBLE])
-    steps, starts = step.ppf(tails), z_start.ppf(tails)
-    above = np.flatnonzero(bins.z_hi >= starts[1])
-    if above.size:
-        i = above[0]
-        raise HurstfitError(
-            f"{bins.path}, {bins.row_label(i)}: z_hi {bins.z_hi[i]:g} is not below the start of the walk, "
-            f"z_start = {starts[1]:g} at the latest ({name}, [clock])"
-        )
-    # a walk takes fewest steps when it starts late with long steps; bins above the latest start are impossible there
-    lowest, highest = prediction.step_range(np.array([steps[1], steps[0]]), np.array([starts[0], starts[1]]))
-    over = np.flatnonzero(highest > table.axes.steps[-1])
-    if over.size:
-        i = over[0]
-        raise HurstfitError(
-            f"{bins.path}, {bins.row_label(i)}: up to {highest[i]:.0f} steps "
-            f"({name}, [clock]: steps as short as {steps[0]:.4g} Myr), but the {table.noise} table holds up to {table.axes.steps[-1]}; allow only longer steps or make a longer table"
-        )
-    never = np.flatnonzero(highest < 1)
-    if never.size:
-        i = never[0]
-        raise HurstfitError(
-            f"{bins.path}, {bins.row_label(i)}: the walk has not taken its first step there for any step and z_start allowed "
-            f"({name}, [clock])"
-        )
-    some = np.flatnonzero(lowest < 1)
-    if some.size:
-        cautions.append(
-            f"{some.size} bins lie before the first step of the walk for part of the prior of step and z_start, "
-            "which is therefore excluded"
-        )
-    return float(max(lowest.min(), 0.0)), float(highest.max())

@@ -117,7 +117,7 @@ def parse_selection(
         if name != "default" and name not in studies:
             hint = did_you_mean(name, [*studies, "default"])
             raise HurstfitError(
-                f"{where}, [selection.{name}]: {table} has no study of this name; it has {', '.join(studies)}{hint}"
+                f"{where}, [selection.{name}]: {table} has no study of this name{hint}; it has {', '.join(studies)}"
             )
         if not isinstance(terms, Mapping):
             raise HurstfitError(f"{where}, [selection] {name}: found {terms!r}, allowed is a table of terms for one study")
@@ -125,8 +125,8 @@ def parse_selection(
         for term, spec in terms.items():
             if term not in TERMS:
                 raise HurstfitError(
-                    f"{where}, [selection.{name}]: unknown key {term!r}; allowed are {', '.join(TERMS)}"
-                    f"{did_you_mean(term, TERMS)}"
+                    f"{where}, [selection.{name}]: unknown key {term!r}{did_you_mean(term, TERMS)}; "
+                    f"allowed are {', '.join(TERMS)}"
                 )
             kind = TERMS[term]
             parsed[name][term] = parse_prior(

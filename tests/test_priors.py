@@ -8,7 +8,7 @@ import warnings
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy import stats
 
@@ -237,6 +237,7 @@ def test_no_beta_is_made_up_for_impossible_moments(mean, sd):
         beta_from_mean_sd(mean, sd)
 
 
+@settings(deadline=None)
 @given(st.floats(0.001, 0.999), st.floats(0.01, 0.99))
 def test_matched_beta_has_the_mean_and_sd_asked_for(mean, share):
     sd = share * math.sqrt(mean * (1 - mean))
@@ -437,6 +438,7 @@ def _parse_or_sentence(spec, limits):
         return str(error)
 
 
+@settings(deadline=None)
 @given(_toml_values, st.sampled_from([SHARE, RATIO, EXPONENT]))
 def test_anything_at_all_gives_a_prior_or_a_sentence(spec, limits):
     result = _parse_or_sentence(spec, limits)
@@ -454,6 +456,7 @@ _forms = st.one_of(
 ) | st.fixed_dictionaries({"mean": _number, "sd": _number})
 
 
+@settings(deadline=None)
 @given(_forms, st.sampled_from([SHARE, RATIO, EXPONENT]))
 def test_every_accepted_form_can_be_sampled(spec, limits):
     prior = _parse_or_sentence(spec, limits)

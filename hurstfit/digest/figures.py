@@ -176,11 +176,9 @@ def _side_by_side(z_lo: NDArray[np.float64], z_hi: NDArray[np.float64]) -> list[
 
 def _true_fraction(run: Run, draws: NDArray[np.float64], z: NDArray[np.float64]) -> NDArray[np.float64]:
     """Compute the true fraction of the walk at single redshifts, shape (draws, z)."""
-    problem = run.problem
-    full = problem.posterior.complete(draws)
-    age = problem.clock.age(z)[None, :] - problem.clock.age(full[:, 2])[:, None]
-    surface = problem.posterior.prediction.surface
-    return np.clip(surface(full[:, :1], age / full[:, 1:2]), 0.0, 1.0)
+    posterior = run.problem.posterior
+    full = posterior.complete(draws)
+    return posterior.prediction.at_redshifts(full[:, 0], full[:, 1], full[:, 2], z)
 
 
 def _mark_unconverged(run: Run, figure: Figure) -> None:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from pathlib import Path
 
+import h5py
 import numpy as np
 
 from hurstfit.digest.words import (
@@ -43,6 +44,8 @@ def vet_lines(path: Path) -> list[str]:
     HurstfitError
         With the first thing that is wrong.
     """
+    if path.is_dir():
+        raise HurstfitError(f"{path} is a directory; name a file")
     if not path.exists():
         raise HurstfitError(f"{path} does not exist")
     kind = path.suffix.lower()
@@ -51,6 +54,10 @@ def vet_lines(path: Path) -> list[str]:
     if kind in (".ecsv", ".csv"):
         return _measurements(read_measurements(path))
     if kind in (".h5", ".hdf5"):
+        if not h5py.is_hdf5(path):
+            raise HurstfitError(
+                f"{path} cannot be read: it is empty, truncated, damaged or not HDF5; allowed is a fraction table or a run"
+            )
         return _run(path) if is_run_file(path) else _fractions(path)
     raise HurstfitError(
         f"{path}: the ending {kind or '(none)'} says nothing about what it is; allowed are .toml (configuration), "
@@ -61,12 +68,8 @@ def vet_lines(path: Path) -> list[str]:
 def _configuration(path: Path) -> list[str]:
     problem = load_problem(path)
     lines = [f"{path} is in order.", "", "What will be fitted", *choice_lines(problem), ""]
-    lines += [
-        *parameter_lines(problem),
-        "",
-        "Bins (step number at the centre of the priors of step and z_start)",
-        *bin_lines(problem),
-    ]
+    lines += [*parameter_lines(problem), "", "Bins (step number at the means of the priors of step and z_start)"]
+    lines += bin_lines(problem)
     return [*lines, "", *caution_lines(problem.cautions)]
 
 
@@ -77,7 +80,8 @@ def _measurements(measurements: Measurements) -> list[str]:
         lines += labelled(
             "study",
             f"{study}: {mine.n_bins} bins, redshift {mine.z_lo.min():g} to {mine.z_hi.max():g}, "
-            f"log mass {mine.logm_lo.min():g} to {mine.logm_hi.max():g}, {int(mine.n_quiescent.sum()):,} of {int(mine.n_total.sum()):,} galaxies quiescent",
+            f"log mass {mine.logm_lo.min():g} to {mine.logm_hi.max():g}, "
+            f"{int(mine.n_quiescent.sum()):,} of {int(mine.n_total.sum()):,} galaxies quiescent",
         )
     falling = np.flatnonzero(~measurements.rising)
     lines += labelled("bins", f"{measurements.n_bins} in all, {measurements.n_bins - falling.size} in the rising regime")
@@ -96,7 +100,7 @@ def _fractions(path: Path) -> list[str]:
     lines += labelled(
         "parent samples", f"all walks, and formed mass above {', '.join(f'{m:g}' for m in axes.masses)} of the mean"
     )
-    lines += labelled("windows", f"{', '.join(str(w) for w in axes.windows)} steps")
+    lines += labelled("windows", "from one step to the whole walk" if axes.scales.size > 1 else "one step")
     lines += labelled("criteria", f"zero, and rate below {', '.join(f'{t:g}' for t in axes.thresholds)} of the mean so far")
     lines += labelled(
         "standard error",

@@ -9,6 +9,8 @@ from collections.abc import Iterable
 import numpy as np
 
 from hurstfit.engines.convergence import mcse_quantile
+from hurstfit.engines.joint import INTERRUPTED
+from hurstfit.posterior import Parameter
 from hurstfit.problem import Problem
 from hurstfit.runs.run import QUANTILES, Run
 
@@ -65,8 +67,8 @@ def choice_lines(problem: Problem) -> list[str]:
     lines += labelled("parent sample", problem.definition.describe_parent())
     lines += labelled("criterion", problem.definition.describe_criterion())
     lines += labelled("cosmology", problem.clock.describe())
-    lines += labelled("walk starts", f"at redshift {posterior.z_start.prior.describe()}")
-    lines += labelled("step", f"{posterior.step.prior.describe()} (Myr)")
+    lines += labelled("walk starts", f"at {_value_or_prior(posterior.z_start, 'redshift {}')}")
+    lines += labelled("step", _value_or_prior(posterior.step, "{} Myr"))
     lines += labelled("step number", f"{lo:.0f} to {hi:.0f} over the bins and the prior of the clock")
     source = problem.loaded.config.walk.table or "the one that ships"
     lines += labelled(
@@ -77,11 +79,19 @@ def choice_lines(problem: Problem) -> list[str]:
     return lines
 
 
+def _value_or_prior(parameter: Parameter, form: str) -> str:
+    """Say what a quantity is: ``redshift 12 (fixed)``, or ``a free redshift, prior: uniform from 9 to 16``."""
+    if parameter.prior.is_fixed:
+        return f"{form.format(f'{parameter.prior.mean:g}')} (fixed)"
+    word = "a free redshift" if not parameter.unit else f"free, in {parameter.unit}"
+    return f"{word}, prior: {parameter.prior.describe()}"
+
+
 def _table_error(problem: Problem) -> float:
     d, axes = problem.definition, problem.table.axes
     lo, hi = problem.step_numbers
     steps = np.clip(np.geomspace(max(lo, 1.0), hi, 20), axes.steps[0], axes.steps[-1])
-    return float(problem.table.standard_error(axes.h[:, None], steps, d.criterion, d.window, d.min_mass).max())
+    return float(problem.table.standard_error(axes.h[:, None], steps, str(d.criterion), d.window, d.min_mass).max())
 
 
 def parameter_lines(problem: Problem) -> list[str]:
@@ -129,9 +139,10 @@ def run_cautions(run: Run) -> list[str]:
     """Everything that a reader of this run could be misled by, the gravest first."""
     cautions = []
     if not run.converged:
+        interrupted = run.record.stopped == INTERRUPTED
+        remedy = "run again and let it finish" if interrupted else "raise max_steps in [engine] and run again"
         cautions.append(
-            f"NOT CONVERGED ({run.record.stopped}): medians and intervals may be wrong by more than they say; "
-            "raise max_steps in [engine] and run again"
+            f"NOT CONVERGED ({run.record.stopped}): medians and intervals may be wrong by more than they say; {remedy}"
         )
     if "H" in run.names:
         draws, prior = run.draws("H"), run.problem.posterior.exponent.prior
@@ -158,7 +169,7 @@ def answer_lines(run: Run) -> list[str]:
     if not run.converged:
         lines.append(f"*** NOT CONVERGED: {run.record.stopped} ***")
     if "H" not in run.names:
-        return [*lines, "H is fixed in this run"]
+        return [*lines, f"H is fixed at {run.problem.posterior.exponent.prior.mean:g} in this run"]
     digits = decimals(mcse_quantile(run.chains("H"), 0.5))
     lo95, lo68, median, hi68, hi95 = (f"{q:.{digits}f}" for q in np.quantile(run.draws("H"), QUANTILES))
     x = run.problem.loaded.config.exponent.above
@@ -166,7 +177,7 @@ def answer_lines(run: Run) -> list[str]:
     return [
         *lines,
         f"H = {median}   (68 %: {lo68} to {hi68};  95 %: {lo95} to {hi95})",
-        f"P(H > {x:g}) {_probability(posterior, run.convergence['H'].ess_bulk)}   (prior: {prior:.3f})",
+        f"P(H > {x:g}) {_probability(posterior, run.convergence['H'].ess_bulk)}   (under the prior {prior:.3f})",
     ]
 
 
@@ -174,9 +185,9 @@ def _probability(p: float, ess: float) -> str:
     # with so many effective draws, a share closer to 0 or 1 than one draw cannot be told from 0 or 1
     smallest = 1.0 / max(ess, 1.0) if math.isfinite(ess) else 1.0
     if p < smallest:
-        return f"< {smallest:.1g}"
+        return f"is below {smallest:.1g}"
     if p > 1 - smallest:
-        return f"> {1 - smallest:.5g}"
+        return f"is above {1 - smallest:.5g}"
     return f"= {p:.3f}"
 
 

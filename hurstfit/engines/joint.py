@@ -18,12 +18,17 @@ from hurstfit.engines.convergence import Convergence, assess
 from hurstfit.errors import HurstfitError
 from hurstfit.posterior import Posterior
 
-__all__ = ["Chain", "JointSettings", "sample_joint"]
+__all__ = ["INTERRUPTED", "Chain", "JointSettings", "sample_joint"]
+
+#: Why a chain stopped that the user broke off.
+INTERRUPTED = "the user interrupted"
 
 #: Share of the chain, from its start, that is left out as warm-up.
 WARMUP_SHARE = 0.25
 #: Steps before convergence is first looked at.
 FIRST_LOOK = 500
+#: Stored steps below which an interrupted chain is not worth keeping.
+FEWEST_STEPS = 8
 
 
 @dataclass(frozen=True)
@@ -105,15 +110,20 @@ def sample_joint(posterior: Posterior, settings: JointSettings, progress: Callab
     -------
     Chain
         Marked as not converged where the step limit was reached or the user interrupted.
+
+    Raises
+    ------
+    HurstfitError
+        If hardly any draw from the prior is possible at all.
+    KeyboardInterrupt
+        If the user interrupts before there is anything to keep.
     """
     import emcee
 
     dimension = len(posterior.parameters)
     walkers = settings.ensemble(dimension)
     if walkers % 2 or walkers < 2 * dimension:
-        raise HurstfitError(
-            f"walkers must be an even number of at least {2 * dimension} for {dimension} parameters, not {walkers}"
-        )
+        raise ValueError(f"walkers must be an even number of at least {2 * dimension} for {dimension} parameters, not {walkers}")
     streams = np.random.SeedSequence(settings.seed).spawn(2)
     start = _starting_points(posterior, walkers, np.random.default_rng(streams[0]))
     sampler = emcee.EnsembleSampler(walkers, dimension, posterior.log_probability, vectorize=True, moves=_moves(dimension))
@@ -140,9 +150,9 @@ def sample_joint(posterior: Posterior, settings: JointSettings, progress: Callab
                 stopped = f"the step limit of {settings.max_steps} was reached"
             look_at = int(sampler.iteration * thin * 1.3)
     except KeyboardInterrupt:
-        if sampler.iteration < 8:
+        if sampler.iteration < FEWEST_STEPS:
             raise
-        stopped = "the user interrupted"
+        stopped, converged = INTERRUPTED, False
         found = _assess(sampler.get_chain(), posterior)
     return Chain(
         sampler.get_chain(),
@@ -207,6 +217,6 @@ def _met(found: tuple[Convergence, ...], settings: JointSettings) -> bool:
 
 
 def _how_far(found: tuple[Convergence, ...]) -> str:
-    rhat = max(c.rhat for c in found)
-    ess = min(min(c.ess_bulk, c.ess_tail) for c in found)
+    rhat = np.max([c.rhat for c in found])
+    ess = np.min([min(c.ess_bulk, c.ess_tail) for c in found])
     return f"largest R-hat {rhat:.3f}, smallest ESS {ess:.0f}"

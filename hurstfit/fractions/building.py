@@ -1,6 +1,6 @@
 """Building a table: independent batches, run by any executor, kept as they come, averaged at the end.
 
-Batch k of a build with seed s draws from ``SeedSequence([s, noise]).spawn(...)[k]`` and nothing else, so the table does not
+Batch k of a build with seed s draws from ``SeedSequence([s, noise, k])`` and nothing else, so the table does not
 depend on how many workers there are, nor on how often the build was interrupted.
 """
 
@@ -20,6 +20,7 @@ import numpy as np
 from hurstfit.errors import HurstfitError
 from hurstfit.files import written_aside
 from hurstfit.fractions.axes import TableAxes
+from hurstfit.fractions.replicates import REPLICATES, Replicates
 from hurstfit.fractions.simulate import BATCH_WALKS, BatchResult, simulate_batch
 from hurstfit.fractions.table import FractionTable, with_exact_values
 from hurstfit.versions import versions
@@ -67,9 +68,11 @@ class Build:
     def settings(self) -> dict[str, str]:
         """Everything that determines the numbers, as text for the file."""
         return {
+            "command": (f"hurstfit tabulate {self.noise} --batches {self.batches} --walks {self.batch_walks} --seed {self.seed}"),
             "noise": self.noise,
             "batches": str(self.batches),
             "walks_per_batch": str(self.batch_walks),
+            "walks": str(self.batches * self.batch_walks),
             "seed": str(self.seed),
             "largest_step": str(int(self.axes.steps[-1])),
         }
@@ -152,20 +155,24 @@ def average_batches(build: Build, batches: Iterable[BatchResult]) -> FractionTab
     total = np.zeros(build.axes.shape)
     squares = np.zeros(build.axes.shape)
     members = np.zeros(build.axes.shape[:3])
-    count = 0
-    for batch in batches:
-        count += 1
+    groups = [np.zeros(build.axes.shape) for _ in range(min(REPLICATES, build.batches))]
+    sizes = np.zeros(len(groups))
+    for count, batch in enumerate(batches, start=1):
         share = batch.fraction.astype(float)
         # Welford's update: batches agree to many digits
         difference = share - total
         total += difference / count
         squares += difference * (share - total)
         members += batch.members
+        group = (count - 1) % len(groups)
+        groups[group] += share
+        sizes[group] += 1
     errors = np.sqrt(squares / (count * (count - 1)))
     floor = (1.0 / np.maximum(members, 1.0))[..., None, None]
     errors = np.where((total == 0) | (total == 1), np.maximum(errors, floor), errors)
+    replicates = Replicates.of(build.axes, [g / n for g, n in zip(groups, sizes, strict=True)], errors)
     with_exact_values(build.noise, build.axes, total, errors)
-    return FractionTable(build.noise, build.axes, total, errors, {**build.settings(), **versions()})
+    return FractionTable(build.noise, build.axes, total, errors, {**build.settings(), **versions()}, replicates=replicates)
 
 
 def remove_batches(folder: Path) -> None:

@@ -1,50 +1,77 @@
-"""What counts as quiescent, and among whom: the definition of the predicted fraction."""
+"""What counts as quiescent, and among whom: the definition of the predicted fraction.
+
+Four choices, none of them a footnote: the parent sample, the criterion, the tracer window and the scatter of measured rates.
+"""
 
 from __future__ import annotations
 
 import math
 import re
 from dataclasses import dataclass
+from typing import Literal
 
 from hurstfit.errors import HurstfitError
 
-__all__ = ["Definition", "parse_criterion"]
+__all__ = ["Criterion", "Definition", "parse_criterion"]
 
-_RATE = re.compile(r"rate\s*<\s*(\S+)")
+_BELOW = re.compile(r"(rate|ssfr)\s*<\s*(\S+)")
 
 
-def parse_criterion(text: str, where: str = "criterion") -> float | None:
+@dataclass(frozen=True)
+class Criterion:
+    """When a walk counts as quiescent.
+
+    Attributes
+    ----------
+    kind : {'zero', 'rate', 'ssfr'}
+        ``zero``: SFR exactly zero.  ``rate``: SFR below `limit` times the mean SFR of the walk so far.  ``ssfr``: specific
+        SFR (SFR over surviving stellar mass) times cosmic age below `limit`, which is what observers measure.
+    limit : float
+        Threshold; 0 for ``zero``.
+    """
+
+    kind: Literal["zero", "rate", "ssfr"] = "zero"
+    limit: float = 0.0
+
+    def __str__(self) -> str:
+        """Write it as users do."""
+        return "zero" if self.kind == "zero" else f"{self.kind}<{self.limit:g}"
+
+
+def parse_criterion(text: object, where: str = "criterion") -> Criterion:
     """Read a criterion as users write it.
 
     Parameters
     ----------
     text : str
-        ``"zero"`` or ``"rate<theta"``, say ``"rate<0.2"``: SFR below theta times the mean SFR so far.
+        ``"zero"``; ``"rate<theta"``, say ``"rate<0.2"``; or ``"ssfr<T"``.
     where : str
         How to call the key in a message.
 
     Returns
     -------
-    float or None
-        theta, or None for ``"zero"``.
+    Criterion
 
     Raises
     ------
     HurstfitError
-        If it is neither.
+        If it is none of them.
     """
     if isinstance(text, str):
         if text.strip() == "zero":
-            return None
-        match = _RATE.fullmatch(text.strip())
+            return Criterion()
+        match = _BELOW.fullmatch(text.strip())
         if match:
             try:
-                theta = float(match.group(1))
+                limit = float(match.group(2))
             except ValueError:
-                theta = math.nan
-            if theta > 0 and math.isfinite(theta):
-                return theta
-    raise HurstfitError(f"{where}: {text!r} is not a criterion: write 'zero', or 'rate<0.2' with a positive threshold")
+                limit = math.nan
+            if limit > 0 and math.isfinite(limit):
+                return Criterion("rate" if match.group(1) == "rate" else "ssfr", limit)
+    raise HurstfitError(
+        f"{where}: {text!r} is not a criterion; allowed are 'zero', 'rate<0.2' (SFR below 0.2 of the mean SFR so far) and "
+        "'ssfr<0.2' (specific SFR below 0.2 over the cosmic age), with any positive number"
+    )
 
 
 @dataclass(frozen=True)
@@ -55,32 +82,49 @@ class Definition:
     ----------
     min_mass : float or None
         Parent sample: None counts all walks, 0 those that have formed any mass, mu > 0 those with more than mu times the mean.
-    threshold : float or None
-        Criterion: None for an SFR of exactly zero, theta for ``SFR < theta x mean SFR so far``.
+    criterion : Criterion
+        When a walk counts as quiescent.
     window : float
-        Tracer window in steps, over which the SFR is averaged.
+        Tracer window over which the SFR is averaged.
+    window_unit : {'steps', 'Myr'}
+        Unit of `window`.
+    scatter : float
+        Scatter of measured rates in dex.
+    returned_fraction : float
+        Share R of the formed mass that stars have returned; used by the criterion ``ssfr``.
     """
 
     min_mass: float | None = None
-    threshold: float | None = None
+    criterion: Criterion = Criterion()
     window: float = 1.0
+    window_unit: Literal["steps", "Myr"] = "steps"
+    scatter: float = 0.0
+    returned_fraction: float = 0.0
 
     @property
-    def criterion(self) -> str:
-        """The criterion as users write it."""
-        return "zero" if self.threshold is None else f"rate<{self.threshold:g}"
+    def single_step(self) -> bool:
+        """Whether the window is a single step whatever the clock."""
+        return self.window_unit == "steps" and self.window <= 1.0
 
     def describe_parent(self) -> str:
         """Say in words who is counted."""
         if self.min_mass is None:
-            return "all walks, also those that never formed stars"
+            return "all walks, also those that formed next to nothing"
         if self.min_mass == 0:
             return "walks that have formed any mass"
         return f"walks that have formed more than {self.min_mass:g} of the mean mass"
 
     def describe_criterion(self) -> str:
         """Say in words what counts as quiescent."""
-        rate = "SFR" if self.window == 1 else f"SFR averaged over the last {self.window:g} steps"
-        if self.threshold is None:
+        unit = "steps" if self.window_unit == "steps" else "Myr"
+        rate = "SFR" if self.single_step else f"SFR averaged over the last {self.window:g} {unit}"
+        if self.criterion.kind == "zero":
             return f"{rate} exactly zero"
-        return f"{rate} below {self.threshold:g} of the mean SFR so far"
+        if self.criterion.kind == "rate":
+            words = f"{rate} below {self.criterion.limit:g} of the mean SFR so far"
+        else:
+            words = (
+                f"specific SFR ({rate} over surviving mass, {self.returned_fraction:g} of the formed mass returned) "
+                f"below {self.criterion.limit:g} over the cosmic age"
+            )
+        return f"{words}, measured with a scatter of {self.scatter:g} dex" if self.scatter else words

@@ -21,8 +21,9 @@ import numpy as np
 import scipy.fft
 from numpy.typing import NDArray
 
-from hurstfit.fractions.axes import TableAxes
+from hurstfit.fractions.axes import TableAxes, window_scale
 from hurstfit.fractions.kernel import shape_spectrum, tally, walk
+from hurstfit.fractions.spline import cardinal_weights
 from hurstfit.walks.noise import noise_type
 
 __all__ = ["BATCH_WALKS", "BatchResult", "simulate_batch"]
@@ -61,8 +62,8 @@ class _Recording:
     @classmethod
     def of(cls, axes: TableAxes) -> _Recording:
         n = int(axes.steps[-1])
-        starts = np.maximum(axes.steps[:, None] - axes.windows[None, :], 0)
-        times = np.unique(np.concatenate([axes.steps, starts.ravel(), [0]]))
+        starts = [step - axes.windows(step) for step in axes.steps]
+        times = np.unique(np.concatenate([axes.steps, *starts, [0]]))
         slots = np.full(n + 1, -1, dtype=np.int64)
         slots[times] = np.arange(times.size)
         return cls(times, slots)
@@ -96,14 +97,14 @@ def simulate_batch(
     """
     if walks < 1 or walks % BATCH_WALKS:
         raise ValueError(f"walks must be a positive multiple of {BATCH_WALKS}, not {walks}")
-    counts = np.zeros((*axes.shape[:2], axes.windows.size, axes.masses.size + 1, axes.thresholds.size + 2), dtype=np.int64)
+    counts = np.zeros((*axes.shape[:2], axes.scales.size, axes.masses.size + 1, axes.thresholds.size + 2), dtype=np.int64)
     for _ in range(walks // BLOCK_WALKS):
         _simulate_block(noise, axes, rng, counts, report)
     # rows hold walks that pass exactly i mass limits: sum from the top; columns exactly j thresholds: sum from the bottom
     passed = np.cumsum(counts[..., ::-1, :], axis=-2)[..., ::-1, :]
     quiescent = np.cumsum(passed, axis=-1)
     members = quiescent[:, :, 0, :, -1]
-    share = quiescent[..., :-1] / np.maximum(quiescent[..., -1:], 1)
+    share = _to_scales(axes, quiescent[..., :-1] / np.maximum(quiescent[..., -1:], 1))
     return BatchResult(np.ascontiguousarray(share.transpose(0, 1, 3, 2, 4), dtype=np.float32), members)
 
 
@@ -149,8 +150,15 @@ def _tally_block(axes: TableAxes, recording: _Recording, masses: NDArray[np.floa
     for j, n in enumerate(axes.steps):
         now = recording.slots[n]
         floors = axes.masses * masses[now].mean()
-        # windows longer than the walk are all the same window, that of its whole life
-        distinct = min(np.searchsorted(axes.windows, n, side="left") + 1, axes.windows.size)
-        widths = np.minimum(axes.windows[:distinct], n)
-        tally(masses, now, recording.slots[n - widths], n / widths, floors, thresholds, counts[j, :distinct])
-        counts[j, distinct:] = counts[j, distinct - 1]
+        widths = axes.windows(n)
+        tally(masses, now, recording.slots[n - widths], n / widths, floors, thresholds, counts[j, : widths.size])
+
+
+def _to_scales(axes: TableAxes, share: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Move fractions, (H, steps, windows counted, ...), from the whole-step windows counted to the window scales of the table."""
+    moved = np.empty((*share.shape[:2], axes.scales.size, *share.shape[3:]))
+    for j, n in enumerate(axes.steps):
+        scales = window_scale(axes.windows(n), n)
+        weights = cardinal_weights(scales, axes.scales)
+        moved[:, j] = np.einsum("sw,hw...->hs...", weights, share[:, j, : scales.size])
+    return moved

@@ -7,14 +7,19 @@ smooth surface over H and the logarithm of the step number.
 
 from __future__ import annotations
 
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from functools import cached_property
+from itertools import product
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy.interpolate import make_interp_spline
 
-__all__ = ["Surface", "cardinal_weights", "spline_basis"]
+from hurstfit.fractions.axes import window_scale
+
+__all__ = ["Axis", "Surface", "cardinal_weights", "spline_basis"]
 
 
 def cardinal_weights(nodes: NDArray[np.float64], x: ArrayLike) -> NDArray[np.float64]:
@@ -72,76 +77,172 @@ def spline_basis(knots: NDArray[np.float64], x: NDArray[np.float64]) -> tuple[ND
 
 
 @dataclass(frozen=True)
-class Surface:
-    """A quantity over H and step number, smooth in H and ln(steps).
+class Axis:
+    """One axis of a spline: its nodes, in the coordinate in which the spline is cubic.
 
     Attributes
     ----------
-    h, steps : ndarray
-        Nodes.
-    values : ndarray, shape (n_h, n_steps) or (replicates, n_h, n_steps)
-        Values at the nodes.
+    nodes : ndarray, shape (n,)
+        Increasing; a single node makes an axis along which nothing varies.
     """
 
-    h: NDArray[np.float64]
-    steps: NDArray[np.float64]
-    values: NDArray[np.float64]
+    nodes: NDArray[np.float64]
 
     @cached_property
-    def _spline(self) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
-        along_h = make_interp_spline(self.h, self.values, k=3, axis=-2)
-        along_n = make_interp_spline(np.log(self.steps), np.moveaxis(along_h.c, 0, -2), k=3, axis=-1)
-        return along_h.t, along_n.t, np.moveaxis(along_n.c, 0, -1)
+    def knots(self) -> NDArray[np.float64]:
+        """Knots of the not-a-knot cubic spline through the nodes (of lower degree where there are fewer than four)."""
+        if self.nodes.size < 4:
+            raise ValueError(f"a cubic spline needs four nodes, not {self.nodes.size}")
+        inner = self.nodes[2:-2]
+        return np.concatenate([np.repeat(self.nodes[0], 4), inner, np.repeat(self.nodes[-1], 4)])
 
-    def covers(self, H: ArrayLike, steps: ArrayLike) -> NDArray[np.bool_]:
-        """Tell where the surface is defined, after broadcasting `H` and `steps`."""
-        H, steps = np.asarray(H, dtype=float), np.asarray(steps, dtype=float)
-        return (self.h[0] <= H) & (self.h[-1] >= H) & (steps >= self.steps[0]) & (steps <= self.steps[-1])
+    def basis(self, x: NDArray[np.float64]) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
+        """Find the basis functions that are not zero at points kept within the nodes: index of the first, and values."""
+        if self.nodes.size == 1:
+            return np.zeros(x.shape, dtype=np.int64), np.ones((*x.shape, 1))
+        return spline_basis(self.knots, np.clip(x, self.nodes[0], self.nodes[-1]))
 
-    def h_basis(self, H: NDArray[np.float64]) -> NDArray[np.float64]:
-        """All basis functions in H, shape H.shape + (n_h,), H clipped to the nodes."""
-        return _dense(self._spline[0], np.clip(H, self.h[0], self.h[-1]))
+    def dense_basis(self, x: NDArray[np.float64]) -> NDArray[np.float64]:
+        """All basis functions, shape x.shape + (n,)."""
+        first, values = self.basis(x)
+        full = np.zeros((*x.shape, self.nodes.size))
+        np.put_along_axis(full, first[..., None] + np.arange(values.shape[-1]), values, axis=-1)
+        return full
 
-    def step_basis(self, steps: NDArray[np.float64]) -> NDArray[np.float64]:
-        """All basis functions in ln(steps), shape steps.shape + (n_steps,), steps clipped to the nodes."""
-        return _dense(self._spline[1], np.log(np.clip(steps, self.steps[0], self.steps[-1])))
+    def coefficients(self, values: NDArray[np.float64], axis: int) -> NDArray[np.float64]:
+        """Coefficients of the spline through `values` along one axis."""
+        if self.nodes.size == 1:
+            return values
+        return np.moveaxis(make_interp_spline(self.nodes, values, k=3, axis=axis).c, 0, axis)
+
+
+@dataclass(frozen=True)
+class Surface:
+    """The fraction of one definition, smooth over H, ln(steps), the scale of the tracer window, and the threshold.
+
+    Attributes
+    ----------
+    h, steps, scale, threshold : Axis
+        Nodes in the noise type's own coordinate of H, in ln(steps), in window scale (a single node where the window is one step),
+        and in ln(theta) (a single node where the threshold is the same everywhere).
+    coefficients : ndarray, shape (..., n_h, n_steps, n_scales, n_thresholds)
+        B-spline coefficients; leading axes hold replicates of the table.
+    h_coordinate : callable
+        Coordinate of H.
+    """
+
+    h: Axis
+    steps: Axis
+    scale: Axis
+    threshold: Axis
+    coefficients: NDArray[np.float64]
+    h_coordinate: Callable[[ArrayLike], NDArray[np.float64]]
+
+    @classmethod
+    def through(
+        cls,
+        h: NDArray[np.float64],
+        steps: NDArray[Any],
+        scales: NDArray[np.float64],
+        thresholds: NDArray[np.float64],
+        values: NDArray[np.float64],
+        h_coordinate: Callable[[ArrayLike], NDArray[np.float64]],
+    ) -> Surface:
+        """Lay a surface through values at nodes, shape (..., n_h, n_steps, n_scales, n_thresholds)."""
+        axes = Axis(h_coordinate(h)), Axis(np.log(steps)), Axis(scales), Axis(np.log(thresholds))
+        for k, axis in enumerate(axes):
+            values = axis.coefficients(values, k - 4)
+        return cls(*axes, np.ascontiguousarray(values), h_coordinate)
 
     @property
-    def step_knots(self) -> NDArray[np.float64]:
-        """Knots of the spline in ln(steps)."""
-        return self._spline[1]
+    def step_limits(self) -> tuple[float, float]:
+        """Smallest and largest step number of the table."""
+        return float(np.exp(self.steps.nodes[0])), float(np.exp(self.steps.nodes[-1]))
 
-    @property
-    def coefficients(self) -> NDArray[np.float64]:
-        """B-spline coefficients, the shape of `values`."""
-        return self._spline[2]
+    def h_basis(self, H: ArrayLike) -> NDArray[np.float64]:
+        """All basis functions in H, shape H.shape + (n_h,)."""
+        return self.h.dense_basis(self.h_coordinate(H))
 
-    def __call__(self, H: ArrayLike, steps: ArrayLike) -> NDArray[np.float64]:
-        """Interpolate; points outside are moved to the edge (ask :meth:`covers` first).
+    def at_exponents(self, H: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Contract the coefficients in H, shape (vectors, n_steps, n_scales, n_thresholds)."""
+        # four rows a vector, not a product with all of them, which would also wake the threads of a linear-algebra library
+        first, values = self.h.basis(self.h_coordinate(H))
+        return np.asarray(sum(self.coefficients[first + a] * values[:, a, None, None, None] for a in range(values.shape[-1])))
+
+    def walk_basis(self, steps: ArrayLike, window: ArrayLike, threshold: ArrayLike) -> NDArray[np.float64]:
+        """All basis functions in the rest, shape steps.shape + (n_steps, n_scales, n_thresholds)."""
+        steps, window, threshold = _broadcast(steps, window, threshold)
+        in_steps = self.steps.dense_basis(np.log(steps))
+        in_scale = self.scale.dense_basis(window_scale(window, steps))
+        in_threshold = self.threshold.dense_basis(np.log(threshold))
+        return np.einsum("...a,...b,...c->...abc", in_steps, in_scale, in_threshold)
+
+    def along_walk(
+        self, rows: NDArray[np.float64], steps: ArrayLike, window: ArrayLike, threshold: ArrayLike
+    ) -> NDArray[np.float64]:
+        """Evaluate many walks whose H is already contracted.
 
         Parameters
         ----------
-        H, steps : array_like
-            Correlation exponents and step numbers, broadcast against each other.
+        rows : ndarray, shape (vectors, n_steps, n_scales, n_thresholds)
+            from :meth:`at_exponents`.
+        steps, window, threshold : array_like, shape (vectors, ...)
+            Step numbers, tracer windows in steps, and theta, broadcast against each other.
+
+        Returns
+        -------
+        ndarray, the broadcast shape
+        """
+        steps, window, threshold = _broadcast(steps, window, threshold)
+        shape = steps.shape
+        steps, window, threshold = (x.reshape(shape[0], -1) for x in (steps, window, threshold))
+        vector = np.arange(shape[0])[:, None]
+        total = np.zeros(steps.shape)
+        for (i, j, k), weight in self._corners(steps, window, threshold):
+            total += rows[vector, i, j, k] * weight
+        return total.reshape(shape)
+
+    def __call__(
+        self, H: ArrayLike, steps: ArrayLike, window: ArrayLike = 1.0, threshold: ArrayLike = 1.0
+    ) -> NDArray[np.float64]:
+        """Interpolate; points outside the table are moved to its edge.
+
+        Parameters
+        ----------
+        H, steps, window, threshold : array_like
+            Correlation exponents, step numbers, tracer windows in steps and theta, broadcast against each other; a window or
+            threshold matters only where the surface has an axis for it.
 
         Returns
         -------
         ndarray
-            The broadcast shape, after a leading replicate axis if `values` has one.
+            The broadcast shape, after the leading axes of `coefficients`.
         """
-        H, steps = np.asarray(H, dtype=float), np.asarray(steps, dtype=float)
-        knots_h, knots_n, coefficients = self._spline
-        i, in_h = spline_basis(knots_h, np.clip(H, self.h[0], self.h[-1]))
-        j, in_n = spline_basis(knots_n, np.log(np.clip(steps, self.steps[0], self.steps[-1])))
-        total = np.zeros((*self.values.shape[:-2], *np.broadcast_shapes(H.shape, steps.shape)))
-        for a in range(4):
-            for b in range(4):
-                total += coefficients[..., i + a, j + b] * (in_h[..., a] * in_n[..., b])
+        H, steps, window, threshold = _broadcast(H, steps, window, threshold)
+        first, in_h = self.h.basis(self.h_coordinate(H))
+        total = np.zeros((*self.coefficients.shape[:-4], *H.shape))
+        for (i, j, k), weight in self._corners(steps, window, threshold):
+            for a in range(in_h.shape[-1]):
+                total += self.coefficients[..., first + a, i, j, k] * (weight * in_h[..., a])
         return total
 
+    def _corners(
+        self, steps: NDArray[np.float64], window: NDArray[np.float64], threshold: NDArray[np.float64]
+    ) -> Iterator[tuple[tuple[NDArray[np.int64], ...], NDArray[np.float64]]]:
+        """Go through the coefficients around each point: their indices, and the product of basis functions there."""
+        found = (
+            self.steps.basis(np.log(steps)),
+            self.scale.basis(window_scale(window, steps)),
+            self.threshold.basis(np.log(threshold)),
+        )
+        for corner in product(*(range(values.shape[-1]) for _, values in found)):
+            index = tuple(first + c for (first, _), c in zip(found, corner, strict=True))
+            weight = found[0][1][..., corner[0]]
+            for (_, values), c in zip(found[1:], corner[1:], strict=True):
+                if values.shape[-1] > 1:
+                    weight = weight * values[..., c]
+            yield index, weight
 
-def _dense(knots: NDArray[np.float64], x: NDArray[np.float64]) -> NDArray[np.float64]:
-    first, values = spline_basis(knots, x)
-    full = np.zeros((*x.shape, knots.size - 4))
-    np.put_along_axis(full, first[..., None] + np.arange(4), values, axis=-1)
-    return full
+
+def _broadcast(*arrays: ArrayLike) -> tuple[NDArray[np.float64], ...]:
+    return tuple(np.broadcast_arrays(*(np.asarray(x, dtype=float) for x in arrays)))

@@ -1,10 +1,10 @@
 """The HDF5 file of a fraction table: the one place that knows its format.
 
 Root attributes: ``format`` = "hurstfit fraction table", ``format_version``, ``noise``, ``sha256``.  Group ``made_by``: one string
-attribute for each setting and version.  Data sets: ``h``, ``steps``, ``masses``, ``windows``, ``thresholds`` (the axes),
-``values`` and ``errors`` with the axes (H, steps, parent sample: all walks and then each of ``masses``, window, criterion:
-zero and then each of ``thresholds``).  Values and errors are stored to six decimals; exactly known values are put back to
-full precision on reading.
+attribute for each setting and version.  Data sets: ``h``, ``steps``, ``masses``, ``scales``, ``thresholds`` (the axes),
+``values`` and ``errors`` with the axes (H, steps, parent sample: all walks and then each of ``masses``, window scale, criterion:
+zero and then each of ``thresholds``); ``replicates`` (see :mod:`hurstfit.fractions.replicates`).  Values and errors are
+stored to six decimals; exactly known values are put back to full precision on reading.
 """
 
 from __future__ import annotations
@@ -21,6 +21,8 @@ from numpy.typing import NDArray
 from hurstfit.errors import HurstfitError, did_you_mean
 from hurstfit.files import written_aside
 from hurstfit.fractions.axes import TableAxes
+from hurstfit.fractions.own import ModelTable, read_own_table
+from hurstfit.fractions.replicates import Replicates
 from hurstfit.fractions.table import FractionTable, with_exact_values
 from hurstfit.walks.noise import NOISE_TYPES
 
@@ -28,7 +30,8 @@ __all__ = ["FORMAT_VERSION", "load_table", "read_table", "shipped_path", "write_
 
 FORMAT = "hurstfit fraction table"
 FORMAT_VERSION = 1
-AXES = ("h", "steps", "masses", "windows", "thresholds")
+AXES = ("h", "steps", "masses", "scales", "thresholds")
+ARRAYS = ("values", "errors", "replicates")
 
 
 def write_table(path: Path, table: FractionTable) -> None:
@@ -54,7 +57,11 @@ def write_table(path: Path, table: FractionTable) -> None:
         for name, array in (("values", values), ("errors", errors)):
             # to six decimals, bit-packed: a tenth of the size, far below any simulation error
             file.create_dataset(name, data=array, chunks=(1, *array.shape[1:]), scaleoffset=6, shuffle=True, compression="gzip")
-        stored = [file[name][...] for name in ("values", "errors")]
+        if table.replicates is not None:
+            units = table.replicates.units
+            chunks = (1, 1, *units.shape[2:])
+            file.create_dataset("replicates", data=units, chunks=chunks, shuffle=True, compression="gzip", compression_opts=9)
+        stored = [file[name][...] for name in ARRAYS if name in file]
         file.attrs["sha256"] = _checksum(table.noise, table.axes, stored, table.made_by)
 
 
@@ -80,7 +87,7 @@ def read_table(path: Path) -> FractionTable:
             noise = str(file.attrs["noise"])
             made_by = {key: str(value) for key, value in file["made_by"].attrs.items()}
             axes = TableAxes(**{name: file[name][...] for name in AXES})
-            stored = [file[name][...] for name in ("values", "errors")]
+            stored = [file[name][...] for name in ARRAYS if name in file]
             recorded = str(file.attrs["sha256"])
     except HurstfitError:
         raise
@@ -88,9 +95,10 @@ def read_table(path: Path) -> FractionTable:
         raise HurstfitError(f"fraction table {path} cannot be read: it is truncated, damaged or not HDF5") from error
     if _checksum(noise, axes, stored, made_by) != recorded:
         raise HurstfitError(f"fraction table {path} is damaged: its contents do not match its checksum")
-    values, errors = (a.astype(float) for a in stored)
+    values, errors = (a.astype(float) for a in stored[:2])
     with_exact_values(noise, axes, values, errors)
-    return FractionTable(noise, axes, values, errors, made_by, recorded)
+    replicates = Replicates(axes, stored[2]) if len(stored) > 2 else None
+    return FractionTable(noise, axes, values, errors, made_by, recorded, replicates)
 
 
 def shipped_path(noise: str) -> Path:
@@ -104,7 +112,7 @@ def load_table(name: str | Path) -> FractionTable:
     Parameters
     ----------
     name : str or Path
-        ``"type-I"`` or ``"type-II"`` for the table that ships, otherwise a file.
+        ``"type-I"`` or ``"type-II"`` for the table that ships, otherwise a file: HDF5, or ECSV for a table of your own.
 
     Returns
     -------
@@ -117,6 +125,13 @@ def load_table(name: str | Path) -> FractionTable:
     """
     if str(name) in NOISE_TYPES:
         return read_table(shipped_path(str(name)))
+    if Path(name).suffix.lower() == ".ecsv":
+        own = read_own_table(Path(name))
+        if isinstance(own, ModelTable):
+            raise HurstfitError(
+                f"{name} holds labelled models ({', '.join(own.models)}), not H, so that there is no H to infer from it"
+            )
+        return own
     if not Path(name).exists():
         hint = did_you_mean(str(name), NOISE_TYPES)
         raise HurstfitError(f"no fraction table {str(name)!r}: give {' or '.join(NOISE_TYPES)}, or a file{hint}")
@@ -129,5 +144,5 @@ def _checksum(noise: str, axes: TableAxes, stored: list[NDArray], made_by: objec
     for name in AXES:
         digest.update(np.ascontiguousarray(getattr(axes, name), dtype="<f8").tobytes())
     for array in stored:
-        digest.update(np.ascontiguousarray(array, dtype="<f4").tobytes())
+        digest.update(np.ascontiguousarray(array, dtype="<f4" if array.dtype.kind == "f" else "i1").tobytes())
     return digest.hexdigest()

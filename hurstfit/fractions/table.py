@@ -10,17 +10,24 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from functools import cached_property
+from itertools import product
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from hurstfit.errors import HurstfitError
-from hurstfit.fractions.axes import TableAxes
+from hurstfit.fractions.axes import TableAxes, window_scale
 from hurstfit.fractions.definition import Definition, parse_criterion
 from hurstfit.fractions.exact import exact_zero_fraction
-from hurstfit.fractions.spline import Surface, cardinal_weights
+from hurstfit.fractions.replicates import Replicates
+from hurstfit.fractions.spline import Surface
+from hurstfit.fractions.weights import criterion_weights, parent_weights
+from hurstfit.walks.noise import NOISE_TYPES
 
-__all__ = ["FractionTable", "with_exact_values"]
+__all__ = ["OWN", "FractionTable", "with_exact_values"]
+
+#: Noise type of a table that a user brings.
+OWN = "own"
 
 
 @dataclass(frozen=True)
@@ -30,7 +37,7 @@ class FractionTable:
     Attributes
     ----------
     noise : str
-        ``"type-I"`` or ``"type-II"``.
+        ``"type-I"``, ``"type-II"``, or ``"own"`` for a table that a user brings.
     axes : TableAxes
         The grid.
     values : ndarray, shape axes.shape
@@ -41,6 +48,8 @@ class FractionTable:
         The settings, seed and versions that made the table.
     digest : str
         SHA-256 of the stored numbers, as a hexadecimal string.
+    replicates : Replicates or None
+        How the errors hang together, see :mod:`hurstfit.fractions.replicates`.
     """
 
     noise: str
@@ -49,6 +58,7 @@ class FractionTable:
     errors: NDArray[np.float64]
     made_by: Mapping[str, str] = field(default_factory=dict)
     digest: str = ""
+    replicates: Replicates | None = None
 
     def __post_init__(self) -> None:
         """Refuse arrays that do not fit the axes."""
@@ -75,7 +85,7 @@ class FractionTable:
         criterion : str
             ``"zero"`` or ``"rate<theta"``, say ``"rate<0.2"``.
         window : float
-            Tracer window in steps; below 1 it is 1, longer than the walk it is the walk.
+            Tracer window in steps, above 0; below 1 it is 1, longer than the walk it is the walk.
         min_mass : float or None
             Parent sample: None for all walks, 0 for those that formed any mass, mu for those above mu times the mean.
 
@@ -89,10 +99,9 @@ class FractionTable:
         HurstfitError
             If a value is outside the table.
         """
-        definition = Definition(min_mass, parse_criterion(criterion), window)
-        H, steps = np.asarray(H, dtype=float), np.asarray(steps, dtype=float)
+        definition = _walk_definition(criterion, window, min_mass)
         self.require(H, steps)
-        return np.clip(self.surface(definition)(H, steps), 0.0, 1.0)
+        return np.clip(self.surface(definition)(H, steps, window), 0.0, 1.0)
 
     def standard_error(
         self,
@@ -106,15 +115,19 @@ class FractionTable:
 
         Errors at the nodes are interpolated linearly, which does not take credit for the averaging that interpolation does.
         """
-        definition = Definition(min_mass, parse_criterion(criterion), window)
+        definition = _walk_definition(criterion, window, min_mass)
         H, steps = np.broadcast_arrays(np.asarray(H, dtype=float), np.asarray(steps, dtype=float))
         self.require(H, steps)
-        errors = self._collapse(self.errors, definition)
-        i, s = _cell(self.axes.h, H)
-        j, t = _cell(np.log(self.axes.steps), np.log(steps))
-        lower = (1 - t) * errors[i, j] + t * errors[i, j + 1]
-        upper = (1 - t) * errors[i + 1, j] + t * errors[i + 1, j + 1]
-        return (1 - s) * lower + s * upper
+        errors = np.abs(self._collapse(self.errors, definition)[1][..., 0])
+        axes = (self._coordinate(self.axes.h), np.log(self.axes.steps), self._scales(definition))
+        points = (self._coordinate(H), np.log(steps), window_scale(window, steps))
+        corners = [_cell(axis, point) for axis, point in zip(axes, points, strict=True)]
+        total = np.zeros(H.shape)
+        for corner in product((0, 1), repeat=3):
+            index = tuple(np.minimum(first + c, axis.size - 1) for (first, _), c, axis in zip(corners, corner, axes, strict=True))
+            weight = np.prod([share if c else 1 - share for (_, share), c in zip(corners, corner, strict=True)], axis=0)
+            total += weight * errors[index]
+        return total
 
     def require(self, H: ArrayLike, steps: ArrayLike) -> None:
         """Refuse H or step numbers that the table does not hold.
@@ -135,9 +148,33 @@ class FractionTable:
     def surface(self, definition: Definition) -> Surface:
         """Fractions of one definition as a smooth surface over H and step number."""
         if definition not in self._surfaces:
-            values = self._collapse(self.values, definition)
-            self._surfaces[definition] = Surface(self.axes.h, self.axes.steps.astype(float), values)
+            thresholds, values = self._collapse(self.values, definition)
+            self._surfaces[definition] = Surface.through(
+                self.axes.h, self.axes.steps, self._scales(definition), thresholds, values, self._coordinate
+            )
         return self._surfaces[definition]
+
+    def deviations(self, definition: Definition) -> Surface:
+        """Deviations of the table's replicates from the table, for one definition, as surfaces.
+
+        Returns
+        -------
+        Surface
+            With one leading axis, over replicates: the sum over it of products of deviations is the covariance of the
+            fractions at any two points.
+
+        Raises
+        ------
+        HurstfitError
+            If the table keeps no replicates.
+        """
+        if self.replicates is None:
+            raise HurstfitError(f"the {self.noise} table keeps no replicates, so that its error cannot be carried along")
+        parent = parent_weights(self.axes, definition, self.noise)
+        thresholds, criterion = criterion_weights(self.axes, definition, self.noise)
+        scales = self._scales(definition)
+        values = self.replicates.deviations(self.errors, parent, scales.size, criterion)
+        return Surface.through(self.axes.h, self.axes.steps, scales, thresholds, values, self._coordinate)
 
     @cached_property
     def _surfaces(self) -> dict[Definition, Surface]:
@@ -146,51 +183,29 @@ class FractionTable:
 
     # -- definitions as weights ------------------------------------------------------------------------------------------------
 
-    def _collapse(self, grid: NDArray[np.float64], definition: Definition) -> NDArray[np.float64]:
-        """Contract the last three axes of `grid` with the weights of a definition."""
-        parent = self._parent_weights(definition.min_mass)
-        window = self._window_weights(definition.window)
-        criterion = self._criterion_weights(definition.threshold)
+    def _coordinate(self, H: ArrayLike) -> NDArray[np.float64]:
+        return np.asarray(H, dtype=float) if self.noise == OWN else NOISE_TYPES[self.noise].coordinate(H)
+
+    def _scales(self, definition: Definition) -> NDArray[np.float64]:
+        """Window scales that a definition needs: the first alone where its window is a single step."""
+        return self.axes.scales[:1] if definition.single_step else self.axes.scales
+
+    def _collapse(self, grid: NDArray[np.float64], definition: Definition) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Contract parent samples and criteria of `grid` with the weights of a definition.
+
+        Returns thresholds, (m,), and the contracted grid, (H, steps, scales, m).
+        """
+        if self.noise == OWN and definition != Definition():
+            raise HurstfitError(
+                "a table of your own has its parent sample, criterion and window built in: "
+                "leave min_mass, criterion, window and scatter out"
+            )
+        parent = parent_weights(self.axes, definition, self.noise)
+        thresholds, criterion = criterion_weights(self.axes, definition, self.noise)
         # nodes with no weight are not touched: most definitions sit on nodes, and the table is large
-        p, w, c = (np.flatnonzero(x) for x in (parent, window, criterion))
-        picked = grid[..., p[:, None, None], w[None, :, None], c[None, None, :]]
-        return np.einsum("...pwc,p,w,c->...", picked, parent[p], window[w], criterion[c])
-
-    def _parent_weights(self, min_mass: float | None) -> NDArray[np.float64]:
-        weights = np.zeros(self.axes.masses.size + 1)
-        if min_mass is None:
-            weights[0] = 1.0
-        elif min_mass == 0:
-            weights[1] = 1.0
-        else:
-            nodes = self.axes.masses[1:]
-            if not nodes.size or not nodes[0] <= min_mass <= nodes[-1]:
-                held = f" and from {nodes[0]:g} to {nodes[-1]:g} of the mean mass" if nodes.size else ""
-                raise HurstfitError(
-                    f"the {self.noise} table holds the parent samples of all walks, of any mass (0){held}, not {min_mass:g}"
-                )
-            weights[2:] = _on_axis(np.log(nodes), np.log(min_mass))
-        return weights
-
-    def _window_weights(self, window: float) -> NDArray[np.float64]:
-        nodes = self.axes.windows
-        if not 0 < window <= nodes[-1]:
-            raise HurstfitError(f"the {self.noise} table holds tracer windows up to {nodes[-1]} steps, not {window:g}")
-        return _on_axis(np.log(nodes), np.log(max(window, 1.0)))
-
-    def _criterion_weights(self, threshold: float | None) -> NDArray[np.float64]:
-        weights = np.zeros(self.axes.thresholds.size + 1)
-        if threshold is None:
-            weights[0] = 1.0
-        else:
-            nodes = self.axes.thresholds
-            if not nodes[0] <= threshold <= nodes[-1]:
-                raise HurstfitError(
-                    f"the {self.noise} table holds the criterion zero and thresholds from {nodes[0]:g} to {nodes[-1]:g}, "
-                    f"not {threshold:g}"
-                )
-            weights[1:] = _on_axis(np.log(nodes), np.log(threshold))
-        return weights
+        p, c = np.flatnonzero(parent), np.flatnonzero(criterion.any(axis=0))
+        picked = grid[:, :, p, : self._scales(definition).size][..., c]
+        return thresholds, np.einsum("hnpsc,p,mc->hnsm", picked, parent[p], criterion[:, c])
 
 
 def with_exact_values(noise: str, axes: TableAxes, values: NDArray, errors: NDArray) -> None:
@@ -202,12 +217,19 @@ def with_exact_values(noise: str, axes: TableAxes, values: NDArray, errors: NDAr
                 values[i, j, 0, 0, 0], errors[i, j, 0, 0, 0] = exact, 0.0
 
 
-def _on_axis(nodes: NDArray[np.float64], x: float) -> NDArray[np.float64]:
-    """Cardinal weights, exactly one node where x lies on it."""
-    at = np.flatnonzero(np.isclose(nodes, x, rtol=0, atol=1e-12))
-    return np.eye(nodes.size)[at[0]] if at.size else cardinal_weights(nodes, x)
+def _walk_definition(criterion: str, window: float, min_mass: float | None) -> Definition:
+    """Put a definition together from what scripts give; the criterion must need no clock."""
+    if not window > 0:
+        raise HurstfitError(f"window: a tracer window must be longer than zero steps, not {window!r}")
+    parsed = parse_criterion(criterion)
+    if parsed.kind == "ssfr":
+        raise HurstfitError(f"criterion: {criterion!r} depends on the clock; give the table 'zero' or 'rate<theta'")
+    return Definition(min_mass, parsed, float(window))
 
 
 def _cell(axis: NDArray[np.float64], x: NDArray[np.float64]) -> tuple[NDArray[np.int64], NDArray[np.float64]]:
+    """Index of the node below each point, and how far the point is on the way to the next."""
+    if axis.size == 1:
+        return np.zeros(x.shape, dtype=np.int64), np.zeros(x.shape)
     i = np.clip(np.searchsorted(axis, x, side="right") - 1, 0, axis.size - 2)
     return i, (x - axis[i]) / (axis[i + 1] - axis[i])

@@ -2,8 +2,8 @@
 
 CSV and ECSV differ only in what stands above the names: ECSV has a header in YAML, each line behind a ``#``, which
 gives the delimiter and the units (Astropy Proposal for Enhancement 6).  Both are split here, by the csv module of the
-standard library, so that a mistake in either can be told with its row; a reader made for good files pads what is missing
-and renames what is doubled.
+standard library, so that a mistake in either can be told with its row; a reader made for good files pads what is
+missing and renames what is doubled.
 
 Rows are counted from 1 below the line of names.  Blank lines and lines that start with ``#`` are not rows.
 """
@@ -12,6 +12,7 @@ from __future__ import annotations
 
 import csv
 import re
+import warnings
 from dataclasses import dataclass
 from typing import NoReturn
 
@@ -147,7 +148,9 @@ def _ecsv_header(lines: list[str], path: str) -> tuple[str, dict[str, str | None
     # The first line is the signature; every other one is YAML behind "# ".
     text = "\n".join(line[2:] if line.startswith("# ") else line[1:] for line in lines[1:])
     try:
-        header = yaml.load(text)
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")  # units in the free metadata, which astropy may not know, do not matter here
+            header = yaml.load(text)
     except Exception as error:
         # The parser and the constructors of astropy's own types raise whatever they like.
         refuse(path, problem.format(show(str(error).partition("\n")[0])))

@@ -128,7 +128,7 @@ def _check_unit(cells: Cells, name: str, column: Column) -> None:
 
     allowed = [units.dimensionless_unscaled, *(units.Unit(text) for text in column.units)]
     try:
-        unit = units.Unit(found)
+        unit = units.Unit(found, parse_strict="raise")
     except Exception:
         # The unit parser raises more than its documentation says, such as OverflowError for 10**999999.
         unit = None
@@ -235,6 +235,12 @@ def _counts(columns: Columns) -> None:
         columns.refuse_where(more, "n_quiescent", f"a whole number from 0 to n_total, which is {show(cell)}")
 
 
+def _row_numbers(columns: Columns) -> None:
+    if "row" in columns.arrays:
+        rows = columns["row"]
+        columns.refuse_where((rows < 1) | (rows != np.floor(rows)) | (rows > _MAX_COUNT), "row", ROW["row"].allowed)
+
+
 def _duplicates(columns: Columns) -> None:
     keys = [columns.study_codes(), *(columns[name] for name in ("z_lo", "z_hi", "logm_lo", "logm_hi"))]
     order = np.lexsort(keys[::-1])
@@ -310,4 +316,4 @@ def first_overlap(group: NDArray, x_lo: NDArray, x_hi: NDArray, y_lo: NDArray, y
     return None
 
 
-CHECKS: tuple[Callable[[Columns], None], ...] = (_finite, _study_names, _ranges, _counts, _duplicates, _overlaps)
+CHECKS: tuple[Callable[[Columns], None], ...] = (_finite, _study_names, _ranges, _counts, _row_numbers, _duplicates, _overlaps)

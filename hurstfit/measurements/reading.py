@@ -25,8 +25,9 @@ def read_measurements(path: str | os.PathLike[str]) -> Measurements:
     path : str or path
         A ``.csv`` or ``.ecsv`` file in UTF-8, one row a bin, with the columns ``study``, ``z_lo``, ``z_hi``,
         ``logm_lo``, ``logm_hi`` (log10 of the stellar mass in solar masses), ``n_total``, ``n_quiescent``, ``rising``
-        (true or false) and, if wanted, ``note``.  An ECSV file may give the masses the unit ``dex(solMass)`` or
-        ``dex``.  Blank lines and lines that start with ``#`` are passed over, as is the free metadata of an ECSV header.
+        (true or false: whether the mean star formation rate still rises there) and, if wanted, ``note``.  An ECSV file
+        may give the masses the unit ``dex(solMass)`` or ``dex``.  Blank lines and lines that start with ``#`` are passed
+        over, as is the free metadata of an ECSV header.
 
     Returns
     -------

@@ -99,7 +99,7 @@ class Measurements:
 
     @property
     def rising(self) -> NDArray[np.bool_]:
-        """Flag ``rising`` of every bin, shape (n_bins,)."""
+        """Whether the mean star formation rate still rises in every bin, shape (n_bins,)."""
         return np.asarray(self.table["rising"], bool)
 
     def _numbers(self, name: str) -> NDArray[np.float64]:
@@ -108,7 +108,8 @@ class Measurements:
 
     def row_label(self, i: int | np.integer) -> str:
         """Name a bin for the user, such as ``row 3 (Larkspur-Deep, z 0.5-0.8)``; `i` counts from 0 in this table."""
-        return f"row {self.rows[i]} ({self.study[i]}, z {self.z_lo[i]:.6g}-{self.z_hi[i]:.6g})"
+        z_lo, z_hi = float(self.table["z_lo"][i]), float(self.table["z_hi"][i])
+        return f"row {self.rows[i]} ({self.table['study'][i]}, z {z_lo:.6g}-{z_hi:.6g})"
 
     def select(self, mask: ArrayLike) -> Measurements:
         """Keep some of the bins, which keep the row numbers of their file.

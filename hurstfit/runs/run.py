@@ -117,26 +117,12 @@ class Run:
         """
         from astropy.table import QTable
 
-        meaning = {p.name: p for p in self.problem.posterior.parameters}
         rows = []
-        for name in self.names:
+        for name, unit, description in zip(self.names, self.record.units, self.record.descriptions, strict=True):
             lo95, lo68, median, hi68, hi95 = (float(q) for q in np.quantile(self.draws(name), QUANTILES))
             c = self.convergence[name]
-            rows.append(
-                (
-                    name,
-                    median,
-                    lo68,
-                    hi68,
-                    lo95,
-                    hi95,
-                    c.ess_bulk,
-                    c.ess_tail,
-                    c.rhat,
-                    meaning[name].unit,
-                    meaning[name].description,
-                )
-            )
+            numbers = (median, lo68, hi68, lo95, hi95, c.ess_bulk, c.ess_tail, c.rhat)
+            rows.append((name, *numbers, unit, description))
         columns = ["name", "median", "lo68", "hi68", "lo95", "hi95", "ess_bulk", "ess_tail", "rhat", "unit", "description"]
         table = QTable(rows=rows, names=columns)
         table.meta["converged"] = self.converged
@@ -144,7 +130,13 @@ class Run:
         return table
 
     def probability_above(self, x: float) -> tuple[float, float]:
-        """Prior and posterior probability that H exceeds x."""
+        """Prior and posterior probability that H exceeds x.
+
+        Raises
+        ------
+        HurstfitError
+            If H is fixed in this run.
+        """
         prior = 1.0 - float(self.problem.posterior.exponent.prior.cdf(x))
         return prior, float(np.mean(self.draws("H") > x))
 

@@ -5,17 +5,20 @@ Opens with plain h5py.  Root attributes: ``format`` = "hurstfit run", ``format_v
 
 * ``config``, ``measurements`` (ECSV): the inputs as text; ``used``: which rows of the measurements were fitted;
 * ``versions``: one attribute for each package;
-* ``draws``: one data set for each free parameter, in its own units, shape (steps, walkers), warm-up left out;
+* ``draws``: one data set for each free parameter, in the unit of its attribute ``unit``, shape (steps, walkers), warm-up left
+  out; the attribute ``description`` says what it is;
 * ``log_likelihood``: shape (steps, walkers);
 * ``chain``: the whole ensemble in sampling coordinates, laid out so that emcee's own HDF backend reads it
   (``emcee.backends.HDFBackend(path, name="chain", read_only=True)``).
 
-Every data set carries the SHA-256 of its contents in the attribute ``sha256``.
+Every data set carries the SHA-256 of its contents in the attribute ``sha256``, and the root that of all attributes together in
+``attributes_sha256``.
 """
 
 from __future__ import annotations
 
 import hashlib
+import json
 from dataclasses import dataclass, fields
 from pathlib import Path
 from typing import Any
@@ -63,8 +66,8 @@ class RunRecord:
         Ensemble moves a stored step, and stored steps left out at the start.
     versions : dict of str to str
         Versions of Python and packages.
-    names : tuple of str
-        Free parameters, in the order of the chain.
+    names, units, descriptions : tuple of str
+        Free parameters, in the order of the chain, with their units and meanings.
     draws : ndarray, shape (steps, walkers, parameters)
         Draws in the parameters' own units, warm-up left out.
     log_likelihood : ndarray, shape (steps, walkers)
@@ -96,6 +99,8 @@ class RunRecord:
     warmup: int
     versions: dict[str, str]
     names: tuple[str, ...]
+    units: tuple[str, ...]
+    descriptions: tuple[str, ...]
     draws: NDArray[np.float64]
     log_likelihood: NDArray[np.float64]
     coordinates: NDArray[np.float64]
@@ -122,6 +127,7 @@ def write_run(path: Path, record: RunRecord) -> None:
         file.attrs["format"], file.attrs["format_version"] = FORMAT, FORMAT_VERSION
         for name in _ATTRIBUTES:
             file.attrs[name] = getattr(record, name)
+        file.attrs["attributes_sha256"] = _sha256_of_attributes(vars(record))
         for name in ("config", "measurements"):
             _put(file, name, np.void(getattr(record, name).encode()))
         _put(file, "used", record.used)
@@ -131,6 +137,7 @@ def write_run(path: Path, record: RunRecord) -> None:
         for i, name in enumerate(record.names):
             # a name may not hold a slash: measurement tables refuse studies with one
             _put(draws, name, record.draws[..., i])
+            draws[name].attrs.update(unit=record.units[i], description=record.descriptions[i])
         _put(file, "log_likelihood", record.log_likelihood)
         chain = file.create_group("chain")
         chain.attrs.update(version=record.versions["emcee"], nwalkers=walkers, ndim=dimension, has_blobs=False, iteration=steps)
@@ -147,6 +154,8 @@ def read_run(path: Path) -> RunRecord:
     HurstfitError
         If the file is missing, is not a run, is of a newer version, is damaged, or does not match a checksum.
     """
+    if path.is_dir():
+        raise HurstfitError(f"run file {path} is a directory; name a file that `infer` wrote")
     if not path.is_file():
         raise HurstfitError(f"run file {path} does not exist")
     try:
@@ -163,15 +172,20 @@ def read_run(path: Path) -> RunRecord:
                 contents[name] = bytes(_get(path, file, name)).decode()
             names = tuple(str(name) for name in file["draws"].attrs["names"])
             contents["names"] = names
+            for field, key in (("units", "unit"), ("descriptions", "description")):
+                contents[field] = tuple(str(file["draws"][name].attrs[key]) for name in names)
             contents["draws"] = np.stack([_get(path, file["draws"], name) for name in names], axis=-1)
             contents["used"] = _get(path, file, "used")
             contents["log_likelihood"] = _get(path, file, "log_likelihood")
             contents["versions"] = {key: str(value) for key, value in file["versions"].attrs.items()}
             for field, name in (("accepted", "accepted"), ("coordinates", "chain"), ("log_probability", "log_prob")):
                 contents[field] = _get(path, file["chain"], name)
+            if _sha256_of_attributes(contents) != file.attrs["attributes_sha256"]:
+                raise HurstfitError(f"run file {path} is damaged: its attributes do not match their checksum")
     except HurstfitError:
         raise
-    except (OSError, KeyError, ValueError, TypeError, RuntimeError, UnicodeDecodeError) as error:
+    except Exception as error:
+        # from a damaged file HDF5 raises whatever it likes
         raise HurstfitError(f"run file {path} cannot be read: it is truncated, damaged or not HDF5") from error
     return RunRecord(**contents)
 
@@ -199,6 +213,11 @@ def _get(path: Path, group: h5py.Group, name: str) -> Any:
 
 def _sha256(data: Any) -> str:
     return hashlib.sha256(np.ascontiguousarray(data).tobytes()).hexdigest()
+
+
+def _sha256_of_attributes(contents: dict[str, Any]) -> str:
+    names = (*_ATTRIBUTES, "versions", "names", "units", "descriptions")
+    return hashlib.sha256(json.dumps([contents[name] for name in names], sort_keys=True).encode()).hexdigest()
 
 
 def _plain(value: Any) -> Any:

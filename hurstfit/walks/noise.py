@@ -109,6 +109,10 @@ class NoiseType(ABC):
             raise ValueError(f"{self.name} noise exists for H in (0, {self.h_max:g}{bracket}, not H = {H!r}")
 
     @abstractmethod
+    def coordinate(self, H: ArrayLike) -> NDArray[np.float64]:
+        """Give an increasing function of H in which quiescent fractions are smooth up to the limit of the construction."""
+
+    @abstractmethod
     def white_spectrum(self, n: int, columns: int, rng: np.random.Generator) -> NDArray[np.complex64]:
         """Spectrum of complex white noise, shape (2n, columns), single precision; it does not depend on H."""
 
@@ -129,6 +133,10 @@ class TypeI(NoiseType):
     h_max: float = 1.0
     h_max_included: bool = True
     windows: int = 2
+
+    def coordinate(self, H: ArrayLike) -> NDArray[np.float64]:
+        """Give -sqrt(1 - H): near H = 1 increments differ from each other by a spread of that order, and fractions follow it."""
+        return -np.sqrt(np.maximum(1.0 - np.asarray(H, dtype=float), 0.0))
 
     def white_spectrum(self, n: int, columns: int, rng: np.random.Generator) -> NDArray[np.complex64]:
         """Independent standard normal real and imaginary parts at every frequency."""
@@ -155,6 +163,10 @@ class TypeII(NoiseType):
     h_max: float = 1.5
     h_max_included: bool = False
     windows: int = 1
+
+    def coordinate(self, H: ArrayLike) -> NDArray[np.float64]:
+        """Give H itself: H = 1 is an interior point."""
+        return np.asarray(H, dtype=float)
 
     def white_spectrum(self, n: int, columns: int, rng: np.random.Generator) -> NDArray[np.complex64]:
         """Transform of n complex normals followed by n zeros."""

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from hurstfit.walks.reflect import formed_mass, reflect
@@ -22,22 +22,26 @@ def walk_by_recursion(increments: list[float]) -> list[float]:
     return rates
 
 
+@settings(deadline=None, derandomize=True)
 @given(whole_increments)
 def test_the_closed_form_is_the_recursion(increments: list[int]) -> None:
     assert reflect(increments).tolist() == walk_by_recursion([float(x) for x in increments])
 
 
+@settings(deadline=None, derandomize=True)
 @given(whole_increments)
 def test_the_last_rate_is_the_largest_backward_sum_or_zero(increments: list[int]) -> None:
     backward = np.cumsum(increments[::-1])
     assert reflect(increments)[-1] == max(0, backward.max())
 
 
+@settings(deadline=None, derandomize=True)
 @given(whole_increments)
 def test_a_walk_never_forms_stars_only_if_no_increment_is_positive(increments: list[int]) -> None:
     assert (formed_mass(reflect(increments))[-1] == 0) == (max(increments) <= 0)
 
 
+@settings(deadline=None, derandomize=True)
 @given(whole_increments, st.integers(1, 50))
 def test_the_walk_scales_with_its_increments(increments: list[int], factor: int) -> None:
     np.testing.assert_array_equal(reflect(factor * np.array(increments)), factor * reflect(increments))
