@@ -139,39 +139,128 @@ def digest(run: Path, into: Path | None, overwrite: bool) -> None:
 
 
 @main.command()
+@click.argument("table")
+@click.option("--fraction", type=float, help="True quiescent fraction: say which H gives it.")
+@click.option("--redshift", type=float, default=0.5, show_default=True, help="Redshift at which the fraction holds.")
+@click.option("--step", type=float, default=20.0, show_default=True, help="Time step of the walk in Myr.")
+@click.option("--z-start", type=float, default=12.0, show_default=True, help="Redshift at which walks start.")
+@click.option("--cosmology", default="Planck18", show_default=True, help="Named cosmological model.")
+@click.option(
+    "--definition",
+    multiple=True,
+    help='What counts, say "min_mass=0.1, criterion=rate<0.2, window=10"; repeat it. [default: five common ones]',
+)
+@click.option("--figure", type=click.Path(path_type=Path), help="Draw fraction against H and steps into this PNG or PDF file.")
+@click.option("--overwrite", is_flag=True, help="Replace the figure if it exists.")
+def consult(
+    table: str,
+    fraction: float | None,
+    redshift: float,
+    step: float,
+    z_start: float,
+    cosmology: str,
+    definition: tuple[str, ...],
+    figure: Path | None,
+    overwrite: bool,
+) -> None:
+    """Ask TABLE which H a fraction implies under each definition, and draw it.
+
+    TABLE is type-I or type-II for the tables that ship, or a file.
+    """
+    from hurstfit.clock import CosmicClock
+    from hurstfit.cosmology import cosmology_from
+    from hurstfit.digest.tables import definitions_of, implied_lines, table_figure
+    from hurstfit.files import require_writable, written_aside
+    from hurstfit.fractions.store import load_table
+
+    if fraction is None and figure is None:
+        raise HurstfitError("consult: nothing was asked; give --fraction, --figure or both")
+    kinds = {".png": "png", ".pdf": "pdf"}
+    if figure is not None:
+        if figure.suffix.lower() not in kinds:
+            raise HurstfitError(f"--figure is {figure}; allowed are files that end in .png or .pdf")
+        require_writable(figure, overwrite=overwrite, what="figure")
+    loaded = load_table(table)
+    definitions = definitions_of(loaded, definition)
+    if fraction is not None:
+        clock = CosmicClock.build(cosmology_from(cosmology, where="--cosmology"))
+        _say(implied_lines(loaded, definitions, clock, fraction, redshift, step, z_start))
+    if figure is not None:
+        drawn = table_figure(loaded, definitions, fraction)
+        with written_aside(figure) as aside:
+            drawn.savefig(aside, format=kinds[figure.suffix.lower()], dpi=200)
+        _say([f"written: {figure}"])
+
+
+@main.command()
 @click.argument("noise", type=click.Choice(["type-I", "type-II"]))
 @click.option("--out", required=True, type=click.Path(path_type=Path), help="Fraction table to write.")
 @click.option("--batches", default=16, show_default=True, help="Independent batches; standard errors come from their scatter.")
 @click.option("--walks", default=131072, show_default=True, help="Walks of one batch, a multiple of 8192.")
 @click.option("--seed", default=1, show_default=True, help="Seed of the random numbers.")
 @click.option("--workers", default=1, show_default=True, type=click.IntRange(1), help="Processes; does not change the result.")
+@click.option(
+    "--merge",
+    multiple=True,
+    type=click.Path(path_type=Path),
+    help="Merge this table with others instead of simulating; repeat it.",
+)
 @click.option("--overwrite", is_flag=True, help="Replace the table if it exists.")
-def tabulate(noise: str, out: Path, batches: int, walks: int, seed: int, workers: int, overwrite: bool) -> None:
+def tabulate(
+    noise: str, out: Path, batches: int, walks: int, seed: int, workers: int, merge: tuple[Path, ...], overwrite: bool
+) -> None:
     """Simulate walks of NOISE and tabulate their quiescent fractions.
 
-    An interrupted build goes on where it stopped when the same command is given again.
+    An interrupted build goes on where it stopped when the same command is given again.  Tables of different seeds can be
+    merged into a more precise one.
     """
+    from hurstfit.files import require_writable
+    from hurstfit.fractions.store import read_table, write_table
+
+    require_writable(out, overwrite=overwrite, what="fraction table")
+    if merge:
+        from hurstfit.fractions.merging import merge_tables
+
+        table = merge_tables([read_table(path) for path in merge], [str(path) for path in merge])
+        if table.noise != noise:
+            raise HurstfitError(f"{merge[0]} holds {table.noise}, not {noise}")
+        write_table(out, table)
+    else:
+        table = _build(noise, out, batches, walks, seed, workers)
+    zero = table.errors[:, :, 0, 0, 0].max()
+    _say([f"written: {out}", f"largest standard error: {zero:.2g} (zero, all walks), {table.errors.max():.2g} (any definition)"])
+
+
+def _build(noise: str, out: Path, batches: int, walks: int, seed: int, workers: int) -> Any:
+    """Simulate a table, write it, and remove the batches that it was made from."""
     from concurrent.futures import ProcessPoolExecutor
 
-    from hurstfit.files import require_writable
     from hurstfit.fractions.axes import default_axes
     from hurstfit.fractions.building import Build, remove_batches, run_build
     from hurstfit.fractions.store import write_table
 
-    require_writable(out, overwrite=overwrite, what="fraction table")
     build = Build(noise, default_axes(noise), batches, walks, seed)
     folder = out.with_name(f"{out.name}.batches")
-    with _bar(f"{noise} table", batches, "batches") as bar, ProcessPoolExecutor(workers) as executor:
+    with (
+        _bar(f"{noise} table", batches, "batches") as bar,
+        ProcessPoolExecutor(workers, initializer=_ignore_interrupts) as executor,
+    ):
         try:
             table = run_build(build, folder, executor, bar.update, keep=2 * workers)
         except KeyboardInterrupt:
             executor.shutdown(wait=False, cancel_futures=True)
-            click.echo(f"\ninterrupted: finished batches are in {folder}; give the same command again to go on", err=True)
+            _complain(f"interrupted; finished batches are in {folder}: give the same command again to go on")
             sys.exit(130)
     write_table(out, table)
     remove_batches(folder)
-    zero = table.errors[:, :, 0, 0, 0].max()
-    _say([f"written: {out}", f"largest standard error: {zero:.2g} (zero, all walks), {table.errors.max():.2g} (any definition)"])
+    return table
+
+
+def _ignore_interrupts() -> None:
+    """Leave Ctrl-C to the parent process, which stops its workers itself."""
+    import signal
+
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
 
 
 def _say(lines: Any) -> None:

@@ -106,6 +106,18 @@ class Definition:
         """Whether the window is a single step whatever the clock."""
         return self.window_unit == "steps" and self.window <= 1.0
 
+    def label(self) -> str:
+        """Name the definition in a few words, for legends and lists."""
+        unit = "steps" if self.window_unit == "steps" else "Myr"
+        masses = {None: "all walks", 0.0: "any mass"}
+        parts = [
+            str(self.criterion).replace("<", " < "),
+            masses.get(self.min_mass, f"mass > {self.min_mass or 0:g} of the mean"),
+            "" if self.single_step else f"window {self.window:g} {unit}",
+            f"scatter {self.scatter:g} dex" if self.scatter else "",
+        ]
+        return ", ".join(filter(None, parts))
+
     def describe_parent(self) -> str:
         """Say in words who is counted."""
         if self.min_mass is None:
