@@ -128,10 +128,14 @@ class Posterior:
 
     def counted_fractions(self, physical: Array) -> tuple[Array, NDArray[np.bool_]]:
         """Probability that a catalogued galaxy of each bin is labelled quiescent; shapes as :meth:`true_fractions`."""
+        fraction, possible = self.true_fractions(physical)
+        return self.selected(fraction, physical), possible
+
+    def selected(self, fraction: Array, physical: Array) -> Array:
+        """Apply selection to given true fractions, (vectors, bins)."""
         full = self.complete(physical)
-        fraction, possible = self.prediction(full[:, 0], full[:, 1], full[:, 2])
         r, u, v = (full[:, self._columns[term]] for term in ("completeness_ratio", "missed_fraction", "contamination"))
-        return counted_fraction(fraction, r, u, v), possible
+        return counted_fraction(fraction, r, u, v)
 
     # -- densities -------------------------------------------------------------------------------------------------------------
 

@@ -163,15 +163,20 @@ class BinPrediction:
         possible : ndarray of bool, shape (vectors,)
             False where a bin lies before the first step (n < 1) or beyond the table: there the likelihood is zero.
         """
+        averaged, possible = self.averaged(H, step, z_start)
+        return np.clip(averaged, 0.0, 1.0), possible
+
+    def averaged(self, H: Array, step: Array, z_start: Array) -> tuple[Array, NDArray[np.bool_]]:
+        """Average the surface over every bin as it is, not kept within 0 and 1; parameters and shapes as in a call."""
         if self.fixed_clock is not None:
             coefficients, covered = self._fixed
-            return np.clip(self.surface.h_basis(H) @ coefficients, 0.0, 1.0), np.full(H.shape, covered)
+            return self.surface.h_basis(H) @ coefficients, np.full(H.shape, covered)
         ages, weights = self._nodes
         steps, window, threshold = self.walks(ages, step, z_start)
         lowest, highest = self.surface.step_limits
         rows = self.surface.at_exponents(H)
         fraction = self.surface.along_walk(rows, np.clip(steps, lowest, highest), window, threshold)
-        return np.clip(np.einsum("wbk,bk->wb", fraction, weights), 0.0, 1.0), self._possible(steps)
+        return np.einsum("wbk,bk->wb", fraction, weights), self._possible(steps)
 
     def at_redshifts(self, H: Array, step: Array, z_start: Array, z: Array) -> Array:
         """Predict the fraction at single redshifts, shape (vectors, z), walks kept within the table."""

@@ -121,3 +121,16 @@ def test_single_redshifts_give_the_table_itself(table, clock) -> None:
     z = np.array([0.5, 2.0])
     found = prediction(table, clock).at_redshifts(*vectors(0.7, 20.0, 12.0), z)
     assert found[0] == pytest.approx(table.fraction(0.7, clock.steps(z, 20.0, 12.0)), rel=1e-12)
+
+
+@pytest.mark.parametrize(("z_lo", "z_hi"), [(0.2, 0.4), (3.0, 4.0), (6.0, 8.0), (5.0, 8.5), (0.0, 4.0)])
+def test_few_points_average_a_bin_well_even_near_the_start_of_the_walk(clock, z_lo: float, z_hi: float) -> None:
+    # zero fractions go with powers of the walk's age
+    table = load_table("type-II")
+    bins = BinPrediction(table.surface(Definition()), Definition(), clock, np.array([z_lo]), np.array([z_hi]), latest_start=9.0)
+    ages, weights = bins._nodes
+    born = float(clock.age(9.0))
+    fine = clock.bin_nodes(np.array([z_lo]), np.array([z_hi]), order=60)
+    for power in (-0.9, -0.5, -0.1):
+        few = float((weights * (ages - born) ** power).sum())
+        assert few == pytest.approx(float(fine.average((clock.age(fine.z) - born) ** power)[0]), rel=2e-5)

@@ -13,6 +13,7 @@ from hurstfit.engines.joint import INTERRUPTED
 from hurstfit.posterior import Parameter
 from hurstfit.problem import Problem
 from hurstfit.runs.run import QUANTILES, Run
+from hurstfit.table_error import NEGLIGIBLE_SHARE
 
 __all__ = [
     "answer_lines",
@@ -160,6 +161,12 @@ def run_cautions(run: Run) -> list[str]:
                     cautions.append(
                         f"H and {clock} are degenerate (correlation {correlation:+.2f}): H rests on the prior of {clock}"
                     )
+    effect = run.table_effect
+    if effect is not None and effect.moves > NEGLIGIBLE_SHARE:
+        cautions.append(
+            f"the fraction table's own error moves H by {effect.moves:.1%} of its standard deviation: more than the {NEGLIGIBLE_SHARE:.0%} "
+            "that is negligible; make a more precise table (hurstfit tabulate, with --merge) for counts as large as these"
+        )
     return [*cautions, *run.problem.cautions]
 
 
@@ -209,6 +216,12 @@ def run_lines(run: Run) -> list[str]:
             "", f"{name}: R-hat {c.rhat:.4f}, effective sample size {c.ess_bulk:,.0f} (bulk), {c.ess_tail:,.0f} (tail)"
             + (" - the largest R-hat" if name == worst else ""),
         )  # fmt: skip
+    effect = run.table_effect
+    if effect is not None:
+        lines += labelled(
+            "table's error",
+            f"moves H by {effect.moves:.1%} of its standard deviation, and widens it by {max(effect.widens - 1, 0):.1%}",
+        )
     return lines
 
 

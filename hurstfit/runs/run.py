@@ -17,6 +17,7 @@ from hurstfit.fractions.store import load_table
 from hurstfit.measurements import Measurements
 from hurstfit.problem import Problem, build_problem
 from hurstfit.runs.store import RunRecord, read_run
+from hurstfit.table_error import TableEffect, table_effect
 
 if TYPE_CHECKING:
     from astropy.table import QTable
@@ -105,6 +106,15 @@ class Run:
                 f"the run used the one of digest {record.table_sha256[:12]}, found {table.digest[:12]}"
             )
         return build_problem(loaded, measurements, table)
+
+    @cached_property
+    def table_effect(self) -> TableEffect | None:
+        """What the fraction table's own error does to H; None where H is fixed or the table keeps no replicates."""
+        problem = self.problem
+        if "H" not in self.names or problem.table.replicates is None:
+            return None
+        rng = np.random.default_rng([self.record.seed, 1])
+        return table_effect(problem.posterior, problem.table.deviations(problem.definition), self.thinned(2000), rng)
 
     def summary(self) -> QTable:
         """Medians, intervals and convergence of every free parameter.

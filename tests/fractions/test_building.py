@@ -89,9 +89,7 @@ def test_a_finished_build_is_not_run_again(reference: FractionTable, tmp_path: P
     assert not (tmp_path / "batches").exists()
 
 
-def test_a_batch_that_fails_ends_the_build_and_keeps_what_was_finished(
-    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_a_batch_that_fails_ends_the_build_and_keeps_what_was_finished(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     simulate = Build.simulate
 
     def fail_at_third(build: Build, batch: int) -> BatchResult:
@@ -219,14 +217,10 @@ def test_where_no_batch_saw_a_quiescent_walk_the_error_is_one_walk(reference: Fr
 
 @pytest.mark.parametrize("noise", ["type-I", "type-II"])
 def test_standard_errors_agree_with_the_scatter_of_independent_tables(noise: str) -> None:
-    axes = TableAxes(
-        np.array([0.6, 0.95]), np.array([4, 16]), np.array([0.0, 0.3]), np.array([0.0, 0.5, 1.0]), np.array([0.2])
-    )
+    axes = TableAxes(np.array([0.6, 0.95]), np.array([4, 16]), np.array([0.0, 0.3]), np.array([0.0, 0.5, 1.0]), np.array([0.2]))
     repetitions, batches = 40, 8
     build = Build(noise, axes, batches, BATCH_WALKS, 43)
-    tables = [
-        average_batches(build, (build.simulate(batches * r + k) for k in range(batches))) for r in range(repetitions)
-    ]
+    tables = [average_batches(build, (build.simulate(batches * r + k) for k in range(batches))) for r in range(repetitions)]
     scatter = np.var([t.values for t in tables], axis=0, ddof=1)
     quoted = np.mean([t.errors**2 for t in tables], axis=0)
     # Leave out nodes where nothing was seen: there the error is a floor, and values do not scatter.

@@ -16,9 +16,7 @@ from hurstfit.walks.noise import NOISE_TYPES, noise_type
 @pytest.mark.parametrize("noise", NOISE_TYPES)
 @pytest.mark.parametrize("H", [0.1, 0.5, 0.85, 1.0])
 @pytest.mark.parametrize("n", [1, 2, 5, 30])
-def test_the_covariance_of_backward_sums_follows_from_the_response_to_single_impulses(
-    noise: str, H: float, n: int
-) -> None:
+def test_the_covariance_of_backward_sums_follows_from_the_response_to_single_impulses(noise: str, H: float, n: int) -> None:
     kind = noise_type(noise)
     # The increments are linear in white noise: X = B e, from the inverse transform of the transfer function.
     response = np.fft.ifft(kind.transfer(H, n))
@@ -33,9 +31,7 @@ def test_the_covariance_of_backward_sums_follows_from_the_response_to_single_imp
         scale = 1.0 / (2 * n)
     increments = scale * (matrix @ matrix.conj().T).real
     sums = np.array([[1.0 if t >= n - 1 - i else 0.0 for t in range(n)] for i in range(n)])
-    np.testing.assert_allclose(
-        backward_sum_covariance(noise, H, n), sums @ increments @ sums.T, rtol=1e-10, atol=1e-10
-    )
+    np.testing.assert_allclose(backward_sum_covariance(noise, H, n), sums @ increments @ sums.T, rtol=1e-10, atol=1e-10)
 
 
 @pytest.mark.parametrize("H", [0.05, 0.3, 0.75, 0.95, 1.0])

@@ -78,9 +78,7 @@ def counts(result: BatchResult) -> NDArray[np.int64]:
 
 
 @pytest.mark.parametrize("kind", [TypeI, TypeII])
-def test_a_batch_counts_its_walks_as_a_plain_recount_does(
-    kind: type[NoiseType], monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_a_batch_counts_its_walks_as_a_plain_recount_does(kind: type[NoiseType], monkeypatch: pytest.MonkeyPatch) -> None:
     spectra: list[NDArray[np.complex64]] = []
 
     @dataclass(frozen=True)
@@ -132,9 +130,7 @@ def test_walks_that_share_random_numbers_do_not_bias_the_fractions(noise: str) -
 
 
 def test_a_batch_depends_on_its_generator_and_on_nothing_else() -> None:
-    first, again, other = (
-        simulate_batch("type-II", AXES, BATCH_WALKS, np.random.default_rng(s)) for s in (303, 303, 304)
-    )
+    first, again, other = (simulate_batch("type-II", AXES, BATCH_WALKS, np.random.default_rng(s)) for s in (303, 303, 304))
     np.testing.assert_array_equal(first.fraction, again.fraction)
     np.testing.assert_array_equal(first.members, again.members)
     assert not np.array_equal(first.fraction, other.fraction)

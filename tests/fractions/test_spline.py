@@ -139,9 +139,7 @@ def test_a_surface_passes_through_its_nodes(
     # On the nodes of the window scale w = n^s.  At one step all windows are one step: only s = 0 can be asked for.
     h, n, s, theta = np.meshgrid(H, STEPS[1:], SCALES, THRESHOLDS, indexing="ij")
     np.testing.assert_allclose(surface(h, n, n**s, theta), at_nodes[:, 1:], rtol=0, atol=1e-12)
-    np.testing.assert_allclose(
-        surface(H[:, None], 1.0, 1.0, THRESHOLDS), at_nodes[:, 0, 0], rtol=0, atol=1e-12
-    )
+    np.testing.assert_allclose(surface(H[:, None], 1.0, 1.0, THRESHOLDS), at_nodes[:, 0, 0], rtol=0, atol=1e-12)
 
 
 def test_a_surface_reproduces_a_product_of_cubics() -> None:
@@ -183,9 +181,7 @@ def test_a_surface_interpolates_one_axis_after_the_other(full: tuple[NDArray[np.
 
 
 @pytest.mark.parametrize("power", [1.0, 0.5])
-def test_a_surface_is_a_spline_in_the_coordinate_of_h_that_it_is_given(
-    values: NDArray[np.float64], power: float
-) -> None:
+def test_a_surface_is_a_spline_in_the_coordinate_of_h_that_it_is_given(values: NDArray[np.float64], power: float) -> None:
     def coordinate(h: ArrayLike) -> NDArray[np.float64]:
         return -((1 - np.asarray(h)) ** power)
 

@@ -1,0 +1,324 @@
+"""The table: its nodes, what lies between them, its error, and what it refuses."""
+
+from __future__ import annotations
+
+import dataclasses
+import itertools
+import math
+from typing import Any
+
+import numpy as np
+import pytest
+from numpy.typing import NDArray
+from scipy import stats
+
+from hurstfit.errors import HurstfitError
+from hurstfit.fractions.axes import TableAxes, default_axes, window_scale
+from hurstfit.fractions.building import Build, average_batches
+from hurstfit.fractions.definition import Definition, parse_criterion
+from hurstfit.fractions.exact import exact_zero_fraction
+from hurstfit.fractions.simulate import BATCH_WALKS, BatchResult, simulate_batch
+from hurstfit.fractions.store import load_table
+from hurstfit.fractions.table import FractionTable
+from hurstfit.walks import NOISE_TYPES, draw_noise, formed_mass, reflect
+
+# Statistical tests fail by chance once in a thousand over all their comparisons (Bonferroni), at fixed seeds.
+FALSE_ALARM = 1e-3
+AXES = TableAxes(
+    h=np.array([0.3, 0.5, 0.7, 0.85, 1.0]),
+    steps=np.array([1, 2, 4, 9, 16, 25]),
+    masses=np.array([0.0, 0.05, 0.1, 0.2, 0.4]),
+    scales=np.array([0.0, 0.25, 0.5, 0.75, 1.0]),
+    thresholds=np.array([0.05, 0.1, 0.2, 0.5, 1.5]),
+)
+MASSES = [None, *AXES.masses]
+CRITERIA = ["zero", *(f"rate<{theta:g}" for theta in AXES.thresholds)]
+BUILD = Build("type-II", AXES, 10, BATCH_WALKS, 951)
+
+
+@pytest.fixture(scope="module")
+def batches() -> list[BatchResult]:
+    return [BUILD.simulate(k) for k in range(BUILD.batches)]
+
+
+@pytest.fixture(scope="module")
+def table(batches: list[BatchResult]) -> FractionTable:
+    return average_batches(BUILD, batches)
+
+
+# -- nodes -----------------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(("p", "c"), itertools.product(range(len(MASSES)), range(len(CRITERIA))))
+def test_at_its_nodes_the_table_gives_its_values_and_errors(table: FractionTable, p: int, c: int) -> None:
+    choice: dict[str, Any] = {"criterion": CRITERIA[c], "min_mass": MASSES[p]}
+    grid = AXES.h[:, None], AXES.steps[None, :]
+    np.testing.assert_allclose(table.fraction(*grid, **choice), table.values[:, :, p, 0, c], rtol=0, atol=1e-12)
+    np.testing.assert_allclose(table.standard_error(*grid, **choice), table.errors[:, :, p, 0, c], rtol=1e-9, atol=1e-15)
+    for j, n in enumerate(AXES.steps[1:], start=1):
+        for s, scale in enumerate(AXES.scales):
+            value = table.fraction(AXES.h, int(n), window=float(n) ** scale, **choice)
+            # the spline onto the scales may leave 0..1, what is read does not
+            expected = np.clip(table.values[:, j, p, s, c], 0, 1)
+            np.testing.assert_allclose(value, expected, rtol=0, atol=1e-11)
+
+
+@pytest.mark.parametrize("noise", NOISE_TYPES)
+def test_exact_values_stand_where_they_are_known_and_have_no_error(noise: str) -> None:
+    build = dataclasses.replace(BUILD, noise=noise)
+    table = average_batches(build, [build.simulate(k) for k in range(8)])
+    known = 0
+    for H, n in itertools.product(AXES.h, AXES.steps):
+        exact = exact_zero_fraction(noise, float(H), int(n))
+        if exact is not None:
+            known += 1
+            assert float(table.fraction(H, n)) == pytest.approx(exact, abs=1e-13)
+            assert float(table.standard_error(H, n)) == 0.0
+        else:
+            assert float(table.standard_error(H, n)) > 0.0
+    # n = 1 and 2 at five H, H = 1/2 at four more n, and for type I the limit H = 1 as well
+    assert known == {"type-I": 18, "type-II": 14}[noise]
+
+
+# -- between nodes ---------------------------------------------------------------------------------------------------
+
+
+def test_answers_have_the_broadcast_shape(table: FractionTable) -> None:
+    H, steps = np.array([[0.4], [0.9]]), np.array([3.0, 10.0, 20.0])
+    for read in (table.fraction, table.standard_error):
+        assert read(0.4, 10).shape == ()
+        assert read(H, 10).shape == (2, 1)
+        grid = read(H, steps, "rate<0.2", window=2.5, min_mass=0.07)
+        assert grid.shape == (2, 3)
+        one = [[float(read(h, n, "rate<0.2", window=2.5, min_mass=0.07)) for n in steps] for h in H[:, 0]]
+        np.testing.assert_allclose(grid, one, rtol=1e-12)
+
+
+def test_windows_shorter_than_a_step_and_longer_than_the_walk(table: FractionTable) -> None:
+    H, n = np.array([0.4, 0.7, 0.95]), np.array([3.0, 7.3, 25.0])
+    for criterion in ("zero", "rate<0.2"):
+        step = table.fraction(H, n, criterion)
+        np.testing.assert_allclose(table.fraction(H, n, criterion, window=0.01), step, rtol=0, atol=1e-12)
+        walk = [float(table.fraction(h, t, criterion, window=t)) for h, t in zip(H, n, strict=True)]
+        np.testing.assert_allclose(table.fraction(H, n, criterion, window=1e6), walk, rtol=0, atol=1e-12)
+        assert (step > walk).all()
+    # A window of one step is not lost where the walk has only one.
+    assert float(table.fraction(0.7, 1.0, window=5.0)) == pytest.approx(0.5, abs=1e-12)
+
+
+def test_window_scale_is_the_ratio_of_logarithms_between_one_step_and_the_walk() -> None:
+    assert window_scale(10.0, 1000.0) == pytest.approx(1 / 3)
+    assert window_scale(1.0, 50.0) == 0.0
+    assert window_scale(0.3, 50.0) == 0.0
+    assert window_scale(50.0, 50.0) == 1.0
+    assert window_scale(70.0, 50.0) == 1.0
+    assert window_scale(1.0, 1.0) == 0.0
+    assert window_scale([1.0, 4.0], [[16.0], [4.0]]).tolist() == [[0.0, 0.5], [0.0, 1.0]]
+
+
+def test_fractions_and_errors_stay_within_bounds_everywhere(table: FractionTable) -> None:
+    rng = np.random.default_rng(952)
+    for _ in range(200):
+        choice: dict[str, Any] = {
+            "criterion": "zero" if rng.random() < 0.3 else f"rate<{math.exp(rng.uniform(math.log(0.05), math.log(1.5)))}",
+            "window": math.exp(rng.uniform(-1, 4)),
+            "min_mass": (None, 0.0, rng.uniform(0.05, 0.4))[rng.integers(3)],
+        }
+        H, n = rng.uniform(0.3, 1.0, 50), rng.uniform(1, 25, 50)
+        fraction, error = table.fraction(H, n, **choice), table.standard_error(H, n, **choice)
+        assert (fraction >= 0).all()
+        assert (fraction <= 1).all()
+        assert (error >= 0).all()
+        assert error.max() < 2 * table.errors.max()
+
+
+def test_the_error_between_nodes_lies_between_those_at_nodes(table: FractionTable) -> None:
+    H, n = 0.6, math.sqrt(9 * 16)
+    corners = [float(table.standard_error(h, t, "rate<0.2")) for h in (0.5, 0.7) for t in (9, 16)]
+    assert min(corners) < float(table.standard_error(H, n, "rate<0.2")) < max(corners)
+    # halfway in H and in ln n: the mean of the four
+    assert float(table.standard_error(H, n, "rate<0.2")) == pytest.approx(np.mean(corners), rel=1e-9)
+
+
+OFF_NODES = {
+    "type-I": [0.42, 0.62, 0.77, 0.87, 0.93],
+    "type-II": [0.42, 0.62, 0.77, 0.92, 1.12],
+}
+
+
+@pytest.mark.parametrize("noise", NOISE_TYPES)
+def test_the_table_that_ships_interpolates_to_what_walks_do_between_its_nodes(noise: str) -> None:
+    # Windows of 1, sqrt(n) and n steps, thresholds and parent samples between the nodes of the table as well.
+    axes = TableAxes(
+        h=np.array(OFF_NODES[noise]),
+        steps=np.array([9, 36, 225, 900]),
+        masses=np.array([0.0, 0.03, 0.15, 0.4]),
+        scales=np.array([0.0, 0.5, 1.0]),
+        thresholds=np.array([0.05, 0.13, 0.24, 0.47]),
+    )
+    shipped = default_axes(noise)
+    assert not set(axes.h) & set(shipped.h)
+    assert not set(axes.steps[1:]) & set(shipped.steps)
+    table = load_table(noise)
+    rng = np.random.default_rng(953)
+    count = 20
+    batches = np.array([simulate_batch(noise, axes, BATCH_WALKS, rng).fraction for _ in range(count)], dtype=float)
+    mean, se = batches.mean(axis=0), batches.std(axis=0, ddof=1) / math.sqrt(count)
+    read, error = np.empty(axes.shape), np.empty(axes.shape)
+    for p, mass in enumerate([None, *axes.masses]):
+        for c, criterion in enumerate(["zero", *(f"rate<{theta}" for theta in axes.thresholds)]):
+            for j, n in enumerate(axes.steps):
+                for s, window in enumerate((1.0, math.sqrt(n), float(n))):
+                    choice: dict[str, Any] = {"criterion": criterion, "window": window, "min_mass": mass}
+                    read[:, j, p, s, c] = table.fraction(axes.h, int(n), **choice)
+                    error[:, j, p, s, c] = table.standard_error(axes.h, int(n), **choice)
+    # Where hardly any walk is quiescent the batches know little of their own scatter: a floor of three walks in all.
+    floor = 3 / (count * BATCH_WALKS)
+    # Interpolation itself may be wrong by a fifth of a per cent, less than any survey resolves.
+    allowed = 0.002 + stats.t.isf(FALSE_ALARM / (2 * read.size), count - 1) * np.sqrt(se**2 + error**2 + floor**2)
+    worst = np.unravel_index(np.argmax(np.abs(read - mean) - allowed), read.shape)
+    assert (np.abs(read - mean) <= allowed).all(), (worst, read[worst], mean[worst], allowed[worst])
+
+
+# -- scatter and the clock's criterion -------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("noise", NOISE_TYPES)
+@pytest.mark.parametrize(("theta", "scatter"), [(0.2, 0.25), (0.1, 0.3), (0.5, 0.2)])
+def test_scatter_moves_rates_across_the_threshold_as_it_does_single_walks(noise: str, theta: float, scatter: float) -> None:
+    H, n, size = 0.84 if noise == "type-I" else 0.9, 64, 60_000
+    rng = np.random.default_rng(954)
+    rates = reflect(draw_noise(noise, H, n, size, rng))
+    mass = formed_mass(rates)[:, -1]
+    with np.errstate(invalid="ignore"):
+        q = rates[:, -1] * n / mass
+    measured = q * 10 ** (scatter * rng.standard_normal(size))
+    quiescent = (rates[:, -1] == 0) | (measured < theta)
+    p = quiescent.mean()
+    surface = load_table(noise).surface(Definition(None, parse_criterion(f"rate<{theta}"), scatter=scatter))
+    # The error of the table is a fifth of that of these walks; 0.001 is left to interpolation in theta.
+    assert abs(float(surface(H, n)) - p) < stats.norm.isf(FALSE_ALARM / 12) * 1.02 * math.sqrt(p * (1 - p) / size) + 1e-3
+
+
+def test_scatter_of_nothing_changes_nothing_and_more_of_it_finds_more_below_a_low_threshold(
+    table: FractionTable,
+) -> None:
+    exact, none, little, more = (
+        float(table.surface(Definition(0.1, parse_criterion("rate<0.2"), scatter=x))(0.85, 16.0)) for x in (0.0, 1e-9, 0.05, 0.2)
+    )
+    assert none == pytest.approx(exact, abs=1e-9)
+    assert little != exact
+    assert more > exact
+
+
+def test_specific_rates_are_read_at_the_threshold_that_the_clock_gives(table: FractionTable) -> None:
+    surface = table.surface(Definition(0.1, parse_criterion("ssfr<0.3")))
+    for theta in (0.05, 0.13, 0.2, 1.5):
+        expected = table.surface(Definition(0.1, parse_criterion(f"rate<{theta}")))(0.85, 16.0)
+        assert float(surface(0.85, 16.0, 1.0, theta)) == pytest.approx(float(expected), abs=1e-12)
+
+
+# -- how errors hang together ----------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    "definition",
+    [Definition(), Definition(0.0), Definition(0.1, parse_criterion("rate<0.2")), Definition(0.1, window=5.0)],
+)
+def test_replicates_carry_the_standard_error_and_the_correlations(
+    table: FractionTable, batches: list[BatchResult], definition: Definition
+) -> None:
+    deviations = table.deviations(definition)
+    grid = (AXES.h[:, None], AXES.steps[None, 2:], definition.window)
+    d = deviations(*grid).reshape(BUILD.batches, -1)
+    p = MASSES.index(definition.min_mass)
+    c = CRITERIA.index(str(definition.criterion))
+    if definition.single_step:
+        shares = np.array([b.fraction[:, 2:, p, 0, c] for b in batches], dtype=float)
+        simulated = table.errors[:, 2:, p, 0, c] > 0
+    else:
+        # with a window between scales: each batch read as a table of its own
+        single = [dataclasses.replace(table, values=b.fraction.astype(float)) for b in batches]
+        shares = np.array([t.surface(definition)(*grid) for t in single])
+        simulated = np.broadcast_to(shares.std(axis=0) > 0, shares.shape[1:])
+    d = d[:, simulated.ravel()]
+    x = shares.reshape(BUILD.batches, -1)[:, simulated.ravel()]
+    covariance = np.cov(x.T) / BUILD.batches
+    sd = np.sqrt(np.diag(covariance))
+    # Replicates are kept to a quarter of a standard error and interpolated over definitions: ten of them, each rounded by
+    # up to an eighth, may miss a correlation by 2 x 10/9 x 1/8; off the nodes that are kept more is allowed.
+    loose = 0.3 if definition.single_step and p <= 1 else 0.5
+    assert np.abs(d.T @ d / np.outer(sd, sd) - covariance / np.outer(sd, sd)).max() < loose
+
+
+def test_replicates_do_not_move_exact_values(table: FractionTable) -> None:
+    d = table.deviations(Definition())(0.5, AXES.steps)
+    np.testing.assert_allclose(d, 0.0, atol=1e-15)
+    assert table.deviations(Definition())(0.85, 16.0).any()
+
+
+def test_a_table_without_replicates_says_so(table: FractionTable) -> None:
+    bare = dataclasses.replace(table, replicates=None)
+    with pytest.raises(HurstfitError, match="the type-II table keeps no replicates"):
+        bare.deviations(Definition())
+
+
+# -- what is refused -------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("H", "steps", "choice", "sentence"),
+    [
+        (0.2, 10, {}, "the type-II table holds H from 0.3 to 1, not 0.2"),
+        (1.01, 10, {}, "holds H from 0.3 to 1, not 1.01"),
+        (math.nan, 10, {}, "holds H from 0.3 to 1, not nan"),
+        ([0.5, 1.2, 1.4], 10, {}, "not 1.2"),
+        (0.7, 0.5, {}, "holds step number from 1 to 25, not 0.5"),
+        (0.7, 26, {}, "holds step number from 1 to 25, not 26"),
+        (0.7, 10, {"min_mass": 0.01}, "not 0.01"),
+        (0.7, 10, {"min_mass": 0.5}, "more than 0.05 to 0.4 of the mean mass; not 0.5"),
+        (0.7, 10, {"min_mass": -0.1}, "not -0.1"),
+        (0.7, 10, {"criterion": "rate<0.01"}, "thresholds from 0.05 to 1.5, not 0.01"),
+        (0.7, 10, {"criterion": "rate<2"}, "thresholds from 0.05 to 1.5, not 2"),
+        (0.7, 10, {"criterion": "rate<-1"}, "'rate<-1' is not a criterion"),
+        (0.7, 10, {"criterion": "rate<nan"}, "'rate<nan' is not a criterion"),
+        (0.7, 10, {"criterion": "rate"}, "'rate' is not a criterion"),
+        (0.7, 10, {"criterion": "Zero"}, "'Zero' is not a criterion"),
+        (0.7, 10, {"criterion": "ssfr<0.2"}, "depends on the clock"),
+        (0.7, 10, {"window": 0.0}, "window must be longer than zero steps, not 0"),
+        (0.7, 10, {"window": -2.0}, "window must be longer than zero steps, not -2"),
+        (0.7, 10, {"window": math.nan}, "window must be longer than zero steps, not nan"),
+    ],
+)
+def test_what_the_table_does_not_hold_is_refused_in_one_sentence(
+    table: FractionTable, H: Any, steps: Any, choice: dict[str, Any], sentence: str
+) -> None:
+    for read in (table.fraction, table.standard_error):
+        with pytest.raises(HurstfitError) as caught:
+            read(H, steps, **choice)
+        assert sentence in str(caught.value)
+        assert "\n" not in str(caught.value)
+
+
+def test_scatter_that_the_table_cannot_follow_is_refused(table: FractionTable) -> None:
+    with pytest.raises(HurstfitError, match="scatter has no effect on the criterion zero"):
+        table.surface(Definition(scatter=0.2))
+    with pytest.raises(HurstfitError, match=r"scatter of 0\.5 dex about rate<0\.5 reaches beyond the largest threshold"):
+        table.surface(Definition(None, parse_criterion("rate<0.5"), scatter=0.5))
+
+
+@pytest.mark.parametrize("name", ["values", "errors"])
+def test_arrays_that_do_not_fit_the_axes_are_refused(table: FractionTable, name: str) -> None:
+    array: NDArray[np.float64] = getattr(table, name)[:, :-1]
+    with pytest.raises(ValueError, match=f"{name} have shape"):
+        dataclasses.replace(table, **{name: array})
+
+
+@pytest.mark.parametrize(
+    ("text", "kind", "limit"),
+    [("zero", "zero", 0.0), (" zero ", "zero", 0.0), ("rate<0.2", "rate", 0.2), ("rate < 1e-1", "rate", 0.1)],
+)
+def test_criteria_are_read_as_users_write_them(text: str, kind: str, limit: float) -> None:
+    criterion = parse_criterion(text)
+    assert (criterion.kind, criterion.limit) == (kind, limit)
+    assert parse_criterion(str(criterion)) == criterion
