@@ -90,16 +90,14 @@ def main() -> None:
         gain = (other_variance * other_seconds) / (variance * seconds)
         alone = floor(noise, zero, BLOCK_WALKS)
         walk_steps = BLOCK_WALKS * zero.h.size * int(STEPS[-1])
+        mean_gain = np.exp(np.log(gain).mean())
+        by_steps = ", ".join(f"{n}: {g:.1f}" for n, g in zip(STEPS, np.exp(np.log(gain).mean(axis=0)), strict=True))
+        rate = walk_steps / seconds
+        other_rate = OPPONENT_WALKS / BLOCK_WALKS * walk_steps / other_seconds
         print(f"{noise}, criterion zero, all walks, {zero.h.size} H, steps {STEPS.tolist()}:")
-        print(
-            f"  walk-steps per second and core: {walk_steps / seconds:.3g} (opponent {OPPONENT_WALKS / BLOCK_WALKS * walk_steps / other_seconds:.3g})"
-        )
-        print(
-            f"  variance x CPU time, opponent / ours: {np.exp(np.log(gain).mean()):.1f} (geometric mean; {gain.min():.1f} to {gain.max():.1f})"
-        )
-        print(
-            f"    by steps: {', '.join(f'{n}: {g:.1f}' for n, g in zip(STEPS, np.exp(np.log(gain).mean(axis=0)), strict=True))}"
-        )
+        print(f"  walk-steps per second and core: {rate:.3g} (opponent {other_rate:.3g})")
+        print(f"  variance x CPU time, opponent / ours: {mean_gain:.1f} (geometric mean; {gain.min():.1f} to {gain.max():.1f})")
+        print(f"    by steps: {by_steps}")
         print(f"  CPU time / inverse transforms alone: {seconds / alone:.2f}")
         begun = time.process_time()
         simulate_batch(noise, full, BLOCK_WALKS, rng)

@@ -26,7 +26,8 @@ class BinomialCounts:
     n_quiescent: NDArray[np.float64]
 
     @cached_property
-    def _log_coefficient(self) -> float:
+    def log_coefficient(self) -> float:
+        """Log of the product of the binomial coefficients."""
         k, n = self.n_quiescent, self.n_total
         return float(np.sum(gammaln(n + 1) - gammaln(k + 1) - gammaln(n - k + 1)))
 
@@ -44,7 +45,7 @@ class BinomialCounts:
             Sum over bins; -inf where a count is impossible.
         """
         k, n = self.n_quiescent, self.n_total
-        return (xlogy(k, p) + xlog1py(n - k, -p)).sum(axis=-1) + self._log_coefficient
+        return (xlogy(k, p) + xlog1py(n - k, -p)).sum(axis=-1) + self.log_coefficient
 
     def simulate(self, p: NDArray[np.float64], rng: np.random.Generator) -> NDArray[np.float64]:
         """Draw counts for every bin, the shape of `p`."""

@@ -68,16 +68,10 @@ def test_a_clock_that_leaves_the_table_is_refused(case, step: object) -> None:
 
 def test_any_number_of_walkers_that_fills_the_dimension_will_do(case) -> None:
     load_problem(case.config(engine={"walkers": 8}))
+    terms = {term: {"uniform": [0.1, 0.2]} for term in ("completeness_ratio", "missed_fraction", "contamination")}
+    clock = {"step": {"normal": [20.0, 2.0]}, "z_start": {"uniform": [9.0, 16.0]}}
     with pytest.raises(HurstfitError, match="found 8, allowed is an even number of at least 18 for 9 free"):
-        load_problem(
-            case.config(
-                engine={"walkers": 8},
-                clock={"step": {"normal": [20.0, 2.0]}, "z_start": {"uniform": [9.0, 16.0]}},
-                selection={
-                    "default": {term: {"uniform": [0.1, 0.2]} for term in ("completeness_ratio", "missed_fraction", "contamination")}
-                },
-            )
-        )
+        load_problem(case.config(engine={"walkers": 8}, clock=clock, selection={"default": terms}))
 
 
 def test_cosmologies_are_named_or_given(case) -> None:

@@ -2,13 +2,12 @@
 
 from __future__ import annotations
 
-import os
 from pathlib import Path
 
 from hurstfit.digest.figures import corner_figure, fraction_figure
 from hurstfit.digest.words import run_cautions
 from hurstfit.errors import HurstfitError
-from hurstfit.files import written_aside
+from hurstfit.files import require_writable_folder, written_aside
 from hurstfit.runs.run import Run
 
 __all__ = ["write_digest"]
@@ -61,8 +60,7 @@ def _require_folder(folder: Path, names: list[str], overwrite: bool) -> None:
         folder.mkdir(exist_ok=True)
     except OSError as error:
         raise HurstfitError(f"folder {folder} cannot be made: {error.strerror}") from error
-    if not os.access(folder, os.W_OK | os.X_OK):
-        raise HurstfitError(f"folder {folder} is not writable")
+    require_writable_folder(folder, "digest")
     there = [name for name in names if (folder / name).exists()]
     if there and not overwrite:
         raise HurstfitError(

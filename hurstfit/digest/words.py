@@ -164,8 +164,8 @@ def run_cautions(run: Run) -> list[str]:
     effect = run.table_effect
     if effect is not None and effect.moves > NEGLIGIBLE_SHARE:
         cautions.append(
-            f"the fraction table's own error moves H by {effect.moves:.1%} of its standard deviation: more than the {NEGLIGIBLE_SHARE:.0%} "
-            "that is negligible; make a more precise table (hurstfit tabulate, with --merge) for counts as large as these"
+            f"the fraction table's own error moves H by {effect.moves:.1%} of its standard deviation, more than "
+            f"{NEGLIGIBLE_SHARE:.0%}: make a more precise table (hurstfit tabulate, with --merge) for counts as large as these"
         )
     return [*cautions, *run.problem.cautions]
 

@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hurstfit.engines.convergence import Convergence, assess
+from hurstfit.engines.interrupts import interrupts_when_asked
 from hurstfit.errors import HurstfitError
 from hurstfit.posterior import Posterior
 
@@ -135,20 +136,22 @@ def sample_joint(posterior: Posterior, settings: JointSettings, progress: Callab
     found: tuple[Convergence, ...] = ()
     words = "warming up"
     try:
-        while not stopped:
-            done = sampler.iteration * thin if sampler.iteration else 0
-            moves = min(look_at, settings.max_steps) - done
-            for state in sampler.sample(state, iterations=max(moves // thin, 1), thin_by=thin):  # noqa: B007, B020
-                if progress is not None:
-                    progress(thin, words)
-            found = _assess(sampler.get_chain(), posterior)
-            converged = _met(found, settings)
-            words = _how_far(found)
-            if converged:
-                stopped = "the stopping rule was met"
-            elif sampler.iteration * thin + thin > settings.max_steps:
-                stopped = f"the step limit of {settings.max_steps} was reached"
-            look_at = int(sampler.iteration * thin * 1.3)
+        with interrupts_when_asked() as ask:
+            while not stopped:
+                done = sampler.iteration * thin if sampler.iteration else 0
+                moves = min(look_at, settings.max_steps) - done
+                for state in sampler.sample(state, iterations=max(moves // thin, 1), thin_by=thin):  # noqa: B007, B020
+                    if progress is not None:
+                        progress(thin, words)
+                    ask()
+                found = _assess(sampler.get_chain(), posterior)
+                converged = _met(found, settings)
+                words = _how_far(found)
+                if converged:
+                    stopped = "the stopping rule was met"
+                elif sampler.iteration * thin + thin > settings.max_steps:
+                    stopped = f"the step limit of {settings.max_steps} was reached"
+                look_at = int(sampler.iteration * thin * 1.3)
     except KeyboardInterrupt:
         if sampler.iteration < FEWEST_STEPS:
             raise

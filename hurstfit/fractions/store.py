@@ -89,11 +89,12 @@ def read_table(path: Path) -> FractionTable:
             axes = TableAxes(**{name: file[name][...] for name in AXES})
             stored = [file[name][...] for name in ARRAYS if name in file]
             recorded = str(file.attrs["sha256"])
+        found = _checksum(noise, axes, stored, made_by)
     except HurstfitError:
         raise
-    except (OSError, KeyError, ValueError, TypeError, RuntimeError) as error:
+    except Exception as error:  # a damaged file can make h5py raise almost anything
         raise HurstfitError(f"fraction table {path} cannot be read: it is truncated, damaged or not HDF5") from error
-    if _checksum(noise, axes, stored, made_by) != recorded:
+    if found != recorded:
         raise HurstfitError(f"fraction table {path} is damaged: its contents do not match its checksum")
     values, errors = (a.astype(float) for a in stored[:2])
     with_exact_values(noise, axes, values, errors)

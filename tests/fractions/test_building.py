@@ -186,6 +186,13 @@ def test_settings_that_make_no_table_are_refused(change: dict[str, int], sentenc
         dataclasses.replace(BUILD, **change)
 
 
+def test_every_seed_and_every_batch_has_random_numbers_of_its_own() -> None:
+    batches = [BUILD.simulate(k) for k in range(BUILD.batches)]
+    batches += [dataclasses.replace(BUILD, seed=seed).simulate(0) for seed in (40, 42, 0)]
+    assert len({b.fraction.tobytes() for b in batches}) == len(batches)
+    np.testing.assert_array_equal(BUILD.simulate(3).fraction, batches[3].fraction)
+
+
 def test_a_table_says_what_made_it(reference: FractionTable) -> None:
     made_by = dict(reference.made_by)
     assert {key: made_by[key] for key in ("noise", "batches", "walks_per_batch", "seed")} == {
@@ -218,7 +225,7 @@ def test_where_no_batch_saw_a_quiescent_walk_the_error_is_one_walk(reference: Fr
 @pytest.mark.parametrize("noise", ["type-I", "type-II"])
 def test_standard_errors_agree_with_the_scatter_of_independent_tables(noise: str) -> None:
     axes = TableAxes(np.array([0.6, 0.95]), np.array([4, 16]), np.array([0.0, 0.3]), np.array([0.0, 0.5, 1.0]), np.array([0.2]))
-    repetitions, batches = 40, 8
+    repetitions, batches = 30, 8
     build = Build(noise, axes, batches, BATCH_WALKS, 43)
     tables = [average_batches(build, (build.simulate(batches * r + k) for k in range(batches))) for r in range(repetitions)]
     scatter = np.var([t.values for t in tables], axis=0, ddof=1)

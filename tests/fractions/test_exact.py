@@ -47,9 +47,9 @@ def test_backward_sums_of_type_1_are_fractional_brownian_motion(H: float) -> Non
 @pytest.mark.parametrize("n", [2, 3])
 def test_closed_forms_agree_with_the_multivariate_normal_distribution(noise: str, H: float, n: int) -> None:
     covariance = backward_sum_covariance(noise, H, n)
-    orthant = multivariate_normal(np.zeros(n), covariance, allow_singular=True, abseps=1e-9, releps=1e-9, seed=0)
-    # scipy's integration in two and three dimensions is good to the 1e-9 asked of it, or nearly so.
-    assert exact_zero_fraction(noise, H, n) == pytest.approx(orthant.cdf(np.zeros(n)), abs=1e-7)
+    orthant = multivariate_normal(np.zeros(n), covariance, allow_singular=True, abseps=1e-6, releps=0, seed=0)
+    # scipy's error estimate is that of a random shift of its lattice: ten times what is asked of it is never reached.
+    assert exact_zero_fraction(noise, H, n) == pytest.approx(orthant.cdf(np.zeros(n)), abs=1e-5)
 
 
 @pytest.mark.parametrize("noise", NOISE_TYPES)

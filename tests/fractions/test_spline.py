@@ -46,7 +46,7 @@ def rough(values: NDArray[np.float64]) -> Surface:
 
 @pytest.fixture(scope="module")
 def full() -> tuple[NDArray[np.float64], Surface]:
-    """A surface with all four axes, and the values at its nodes."""
+    """Lay a surface with all four axes; the values at its nodes come first."""
     shape = (H.size, STEPS.size, SCALES.size, THRESHOLDS.size)
     at_nodes = np.random.default_rng(516).uniform(0, 1, shape)
     return at_nodes, Surface.through(H, STEPS, SCALES, THRESHOLDS, at_nodes, identity)

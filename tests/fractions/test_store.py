@@ -189,7 +189,7 @@ path = Path(sys.argv[1])
 flipped = path.with_name("flipped.h5")
 good, content = read_table(path), path.read_bytes()
 outcome = {"refused": 0, "unharmed": 0, "wrong": []}
-for place in range(0, len(content), 61):
+for place in range(0, len(content), len(content) // 200):
     for mask in (0x01, 0xFF):
         damaged = bytearray(content)
         damaged[place] ^= mask
@@ -213,7 +213,7 @@ print(json.dumps(outcome))
 
 def test_no_flipped_byte_anywhere_changes_the_table_or_escapes_the_reader(file: Path) -> None:
     # In a process of its own: a damaged file must not crash or hang the library underneath either.
-    child = subprocess.run([sys.executable, "-c", FLIPS, str(file)], capture_output=True, text=True, timeout=120, check=False)
+    child = subprocess.run([sys.executable, "-c", FLIPS, str(file)], capture_output=True, text=True, timeout=60, check=False)
     assert child.returncode == 0, child.stderr[-500:]
     outcome = json.loads(child.stdout)
     assert outcome["wrong"] == []

@@ -34,7 +34,7 @@ def test_a_flat_prior_gives_the_conjugate_beta(n: int, k: int) -> None:
     # with the binomial coefficient the evidence is 1 / (n + 1); without it, B(k + 1, n - k + 1)
     evidence = integral(1.0)
     assert evidence == pytest.approx(1 / (n + 1), rel=1e-9)
-    assert evidence / np.exp(counts._log_coefficient) == pytest.approx(np.exp(betaln(k + 1, n - k + 1)), rel=1e-9)
+    assert evidence / np.exp(counts.log_coefficient) == pytest.approx(np.exp(betaln(k + 1, n - k + 1)), rel=1e-9)
     for probability in (0.025, 0.16, 0.5, 0.84, 0.975):
         quantile = stats.beta.ppf(probability, k + 1, n - k + 1)
         assert integral(quantile) / evidence == pytest.approx(probability, rel=1e-8)

@@ -32,7 +32,8 @@ def test_what_is_written_is_read_back_bit_for_bit(record: RunRecord, tmp_path: P
 
 
 def test_texts_of_any_characters_survive(record: RunRecord, tmp_path: Path) -> None:
-    odd = replace(record, config_name="pläne/☉.toml", config='# "☉"\r\n\ttab', measurements="☉", stopped="naïve", names=("H[☉ ä]",))
+    texts = {"config_name": "pläne/☉.toml", "config": '# "☉"\r\n\ttab', "measurements": "☉", "stopped": "naïve"}
+    odd = replace(record, names=("H[☉ ä]",), **texts)
     write_run(tmp_path / "odd.h5", odd)
     assert_equal(read_run(tmp_path / "odd.h5"), odd)
 
