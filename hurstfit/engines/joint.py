@@ -19,7 +19,7 @@ from hurstfit.engines.interrupts import interrupts_when_asked
 from hurstfit.errors import HurstfitError
 from hurstfit.posterior import Posterior
 
-__all__ = ["INTERRUPTED", "Chain", "JointSettings", "sample_joint"]
+__all__ = ["INTERRUPTED", "Chain", "JointSettings", "ensemble_moves", "sample_joint"]
 
 #: Why a chain stopped that the user broke off.
 INTERRUPTED = "the user interrupted"
@@ -127,7 +127,7 @@ def sample_joint(posterior: Posterior, settings: JointSettings, progress: Callab
         raise ValueError(f"walkers must be an even number of at least {2 * dimension} for {dimension} parameters, not {walkers}")
     streams = np.random.SeedSequence(settings.seed).spawn(2)
     start = _starting_points(posterior, walkers, np.random.default_rng(streams[0]))
-    sampler = emcee.EnsembleSampler(walkers, dimension, posterior.log_probability, vectorize=True, moves=_moves(dimension))
+    sampler = emcee.EnsembleSampler(walkers, dimension, posterior.log_probability, vectorize=True, moves=ensemble_moves(dimension))
     # emcee draws from a legacy RandomState: seeded here from the run's own seed, so that nothing global enters
     sampler.random_state = np.random.RandomState(np.random.MT19937(streams[1])).get_state()
     thin = max(1, dimension // 3)
@@ -169,12 +169,17 @@ def sample_joint(posterior: Posterior, settings: JointSettings, progress: Callab
     )
 
 
-def _moves(dimension: int) -> list[tuple[object, float]]:
+def ensemble_moves(dimension: int) -> list[tuple[object, float]]:
+    """Choose emcee's moves, with their weights, for a number of parameters.
+
+    emcee's snooker move is left out on purpose: in emcee 3.1.6 it does not leave the target as it is (a standard normal in 12
+    dimensions comes out with a variance of 0.85 when a fifth of the moves are of this kind).
+    """
     import emcee
 
     if dimension <= 5:
         return [(emcee.moves.StretchMove(), 0.5), (emcee.moves.DEMove(), 0.5)]
-    return [(emcee.moves.DEMove(), 0.8), (emcee.moves.DESnookerMove(), 0.2)]
+    return [(emcee.moves.DEMove(), 0.8), (emcee.moves.StretchMove(), 0.2)]
 
 
 def _starting_points(posterior: Posterior, walkers: int, rng: np.random.Generator) -> NDArray[np.float64]:
