@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import errno
 import sys
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
@@ -99,7 +99,8 @@ def vet(path: Path) -> None:
     "--out", type=click.Path(path_type=Path), help="Run file to write. [default: [output] run, or CONFIG's name with .h5]"
 )
 @click.option("--overwrite", is_flag=True, help="Replace the run file if it exists.")
-def infer(config: Path, out: Path | None, overwrite: bool) -> None:
+@click.option("--cross-check", is_flag=True, help="Run the other engine too and compare; exit status 1 if they disagree.")
+def infer(config: Path, out: Path | None, overwrite: bool, cross_check: bool) -> None:
     """Sample the posterior of H for CONFIG and write a run file."""
     from hurstfit.digest.words import answer_lines, caution_lines, choice_lines, run_cautions, run_lines
     from hurstfit.engines.joint import INTERRUPTED
@@ -109,17 +110,32 @@ def infer(config: Path, out: Path | None, overwrite: bool) -> None:
     problem = load_problem(config)
     path = out or Path(problem.loaded.config.output.run or f"{config.stem}.h5")
     with _bar("sampling", problem.loaded.config.engine.max_steps, "moves") as bar:
-
-        def progress(moves: int, words: str) -> None:
-            bar.set_postfix_str(words, refresh=False)
-            bar.update(moves)
-
+        progress = _shown_on(bar)
         run = infer_problem(problem, path, overwrite=overwrite, progress=progress)
     lines = ["", *answer_lines(run), "", "How", *run_lines(run), "", "What was fitted", *choice_lines(problem), ""]
     lines += caution_lines(run_cautions(run))
     _say([*lines, "", f"written: {path}   (next: hurstfit digest {path})"])
     if run.record.stopped == INTERRUPTED:
         sys.exit(130)
+    if cross_check and not _cross_check(run):
+        sys.exit(1)
+
+
+def _cross_check(run: Any) -> bool:
+    """Compare a run with the other engine, print the comparison, and tell whether they agree."""
+    from hurstfit.engines.crosscheck import LIMIT
+    from hurstfit.inference import cross_check
+
+    with _bar("cross-check", run.problem.loaded.config.engine.max_steps, "moves") as bar:
+        other, comparisons = cross_check(run, _shown_on(bar))
+    width = max(len(name) for name in run.names)
+    _say(
+        ["", f"Cross-check: {run.record.engine}, then {other}; in brackets, differences in combined Monte Carlo standard errors"]
+    )
+    _say(comparison.line(width) for comparison in comparisons)
+    apart = [comparison.name for comparison in comparisons if not comparison.agrees]
+    _say([f"ENGINES DISAGREE by more than {LIMIT:g} standard errors on {', '.join(apart)}" if apart else "the engines agree"])
+    return not apart
 
 
 @main.command()
@@ -266,6 +282,16 @@ def _ignore_interrupts() -> None:
 def _say(lines: Any) -> None:
     for line in lines:
         click.echo(line)
+
+
+def _shown_on(bar: Any) -> Callable[[int, str], None]:
+    """Show moves and words on a progress bar."""
+
+    def progress(moves: int, words: str) -> None:
+        bar.set_postfix_str(words, refresh=not moves)
+        bar.update(moves)
+
+    return progress
 
 
 @contextmanager

@@ -78,7 +78,7 @@ class ExponentTable(_Table):
 class EngineTable(_Table):
     """[engine]: how the posterior is sampled, and when to stop."""
 
-    kind: Literal["joint"] = "joint"
+    kind: Literal["auto", "quadrature", "joint"] = "auto"
     seed: Annotated[int, Field(ge=0)] = 1
     walkers: Annotated[int, Field(ge=FEWEST_WALKERS)] | None = None
     max_steps: Annotated[int, Field(ge=100)] = 100_000

@@ -8,7 +8,10 @@ from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
-from hurstfit.engines.joint import Chain, JointSettings, sample_joint
+from hurstfit.engines.chain import Chain
+from hurstfit.engines.choice import run_engine
+from hurstfit.engines.crosscheck import Comparison, compare_draws
+from hurstfit.engines.joint import JointSettings
 from hurstfit.errors import HurstfitError
 from hurstfit.files import require_writable
 from hurstfit.problem import Problem, load_problem
@@ -16,7 +19,7 @@ from hurstfit.runs.run import Run
 from hurstfit.runs.store import RunRecord, is_run_file, write_run
 from hurstfit.versions import versions
 
-__all__ = ["infer", "infer_problem"]
+__all__ = ["cross_check", "infer", "infer_problem"]
 
 #: What a run file may be called if it is to replace something that is no run: never a table or a configuration.
 RUN_ENDINGS = (".h5", ".hdf5")
@@ -67,11 +70,42 @@ def infer_problem(
     engine = problem.loaded.config.engine
     settings = JointSettings(engine.seed, engine.walkers, engine.max_steps, engine.target_ess, engine.max_rhat)
     begun = time.perf_counter()
-    chain = sample_joint(problem.posterior, settings, progress)
+    chain = run_engine(problem.posterior, engine.kind, settings, progress)
     run = Run(_record(problem, settings, chain, time.perf_counter() - begun), path)
     if path is not None:
         write_run(path, run.record)
     return run
+
+
+def cross_check(run: Run, progress: Callable[[int, str], None] | None = None) -> tuple[str, list[Comparison]]:
+    """Run the other engine on the problem of a run and compare their draws.
+
+    Parameters
+    ----------
+    run : Run
+        A run of either engine.
+    progress : callable, optional
+        As in :func:`infer`.
+
+    Returns
+    -------
+    str
+        The other engine, and whether it converged.
+    list of Comparison
+        Parameter by parameter.
+
+    Raises
+    ------
+    HurstfitError
+        If the other engine does not apply.
+    """
+    posterior, engine = run.problem.posterior, run.problem.loaded.config.engine
+    # another seed: draws that share random numbers would agree for that reason alone
+    settings = JointSettings(engine.seed + 1, engine.walkers, engine.max_steps, engine.target_ess, engine.max_rhat)
+    chain = run_engine(posterior, "quadrature" if run.record.engine == "joint" else "joint", settings, progress)
+    other = posterior.physical(chain.coordinates[chain.warmup :])
+    state = chain.engine if chain.converged else f"{chain.engine}, NOT CONVERGED"
+    return state, compare_draws(run.names, run.record.draws, other)
 
 
 def _record(problem: Problem, settings: JointSettings, chain: Chain, seconds: float) -> RunRecord:
@@ -88,7 +122,10 @@ def _record(problem: Problem, settings: JointSettings, chain: Chain, seconds: fl
         table_noise=problem.table.noise,
         table_source=str((loaded.folder / named_table).resolve()) if named_table else "shipped",
         table_sha256=problem.table.digest,
-        engine="joint",
+        engine=chain.engine,
+        engine_chosen=chain.chosen,
+        log_evidence=chain.log_evidence,
+        log_evidence_error=chain.log_evidence_error,
         seed=settings.seed,
         created=datetime.now(UTC).isoformat(timespec="seconds"),
         wall_seconds=seconds,

@@ -32,7 +32,7 @@ CONFIG: dict[str, dict[str, Any]] = {
     "clock": {"cosmology": "Planck18", "step": 20.0, "z_start": 12.0},
     "selection": {"default": {"completeness_ratio": 0.95, "missed_fraction": 0.05, "contamination": 0.02}},
     "exponent": {"prior": {"uniform": [0.05, 1.3]}, "above": 0.9},
-    "engine": {"seed": 7, "target_ess": 400.0, "max_rhat": 1.05},
+    "engine": {"kind": "joint", "seed": 7, "target_ess": 400.0, "max_rhat": 1.05},
 }
 
 

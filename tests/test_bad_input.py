@@ -297,7 +297,7 @@ def no_sampling(monkeypatch: pytest.MonkeyPatch) -> None:
     def sample(*_: object) -> None:
         raise AssertionError("sampling began")
 
-    monkeypatch.setattr("hurstfit.inference.sample_joint", sample)
+    monkeypatch.setattr("hurstfit.inference.run_engine", sample)
 
 
 @pytest.mark.usefixtures("no_sampling")

@@ -202,10 +202,15 @@ def run_lines(run: Run) -> list[str]:
     """How the run went: engine, draws, convergence."""
     record, found = run.record, run.convergence
     steps, walkers, _ = record.draws.shape
+    if record.engine == "joint":
+        draws = (
+            f"{walkers} walkers, {steps * walkers:,} draws kept (warm-up of {record.warmup} steps left out, every "
+            f"{_ordinal(record.thin)} move kept)"
+        )
+    else:
+        draws = f"{steps * walkers:,} independent draws"
     lines = labelled(
-        "engine",
-        f"{record.engine}, seed {record.seed}: {walkers} walkers, {steps * walkers:,} draws kept "
-        f"(warm-up of {record.warmup} steps left out, every {_ordinal(record.thin)} move kept), {record.wall_seconds:.1f} s",
+        "engine", f"{record.engine} ({record.engine_chosen}), seed {record.seed}: {draws}, {record.wall_seconds:.1f} s"
     )
     worst = max(found, key=lambda name: -math.inf if math.isnan(found[name].rhat) else found[name].rhat)
     state = "converged" if run.converged else "NOT CONVERGED"
@@ -216,6 +221,12 @@ def run_lines(run: Run) -> list[str]:
             "", f"{name}: R-hat {c.rhat:.4f}, effective sample size {c.ess_bulk:,.0f} (bulk), {c.ess_tail:,.0f} (tail)"
             + (" - the largest R-hat" if name == worst else ""),
         )  # fmt: skip
+    if math.isfinite(record.log_evidence):
+        digits = decimals(record.log_evidence_error)
+        lines += labelled(
+            "evidence",
+            f"ln p(counts) = {record.log_evidence:.{digits}f} +- {record.log_evidence_error:.1g}; it depends on every prior",
+        )
     effect = run.table_effect
     if effect is not None:
         lines += labelled(

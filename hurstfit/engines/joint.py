@@ -14,12 +14,13 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from hurstfit.engines.chain import Chain
 from hurstfit.engines.convergence import Convergence, assess
 from hurstfit.engines.interrupts import interrupts_when_asked
 from hurstfit.errors import HurstfitError
 from hurstfit.posterior import Posterior
 
-__all__ = ["INTERRUPTED", "Chain", "JointSettings", "ensemble_moves", "sample_joint"]
+__all__ = ["INTERRUPTED", "JointSettings", "ensemble_moves", "sample_joint"]
 
 #: Why a chain stopped that the user broke off.
 INTERRUPTED = "the user interrupted"
@@ -61,40 +62,6 @@ class JointSettings:
         return self.walkers if self.walkers is not None else max(32, 4 * dimension)
 
 
-@dataclass(frozen=True)
-class Chain:
-    """What an ensemble did.
-
-    Attributes
-    ----------
-    coordinates : ndarray, shape (steps, walkers, parameters)
-        Positions in sampling coordinates, warm-up included, every `thin`-th step.
-    log_probability : ndarray, shape (steps, walkers)
-        Log of likelihood times prior at each position.
-    accepted : ndarray of int, shape (walkers,)
-        Accepted proposals.
-    warmup : int
-        Leading steps that are not used.
-    thin : int
-        Ensemble moves for each stored step.
-    convergence : tuple of Convergence
-        Of every parameter, over the steps that are used.
-    converged : bool
-        Whether the stopping rule was met.
-    stopped : str
-        Why sampling stopped, in words.
-    """
-
-    coordinates: NDArray[np.float64]
-    log_probability: NDArray[np.float64]
-    accepted: NDArray[np.int64]
-    warmup: int
-    thin: int
-    convergence: tuple[Convergence, ...]
-    converged: bool
-    stopped: str
-
-
 def sample_joint(posterior: Posterior, settings: JointSettings, progress: Callable[[int, str], None] | None = None) -> Chain:
     """Sample all parameters until the stopping rule holds or the step limit is reached.
 
@@ -127,7 +94,9 @@ def sample_joint(posterior: Posterior, settings: JointSettings, progress: Callab
         raise ValueError(f"walkers must be an even number of at least {2 * dimension} for {dimension} parameters, not {walkers}")
     streams = np.random.SeedSequence(settings.seed).spawn(2)
     start = _starting_points(posterior, walkers, np.random.default_rng(streams[0]))
-    sampler = emcee.EnsembleSampler(walkers, dimension, posterior.log_probability, vectorize=True, moves=ensemble_moves(dimension))
+    sampler = emcee.EnsembleSampler(
+        walkers, dimension, posterior.log_probability, vectorize=True, moves=ensemble_moves(dimension)
+    )
     # emcee draws from a legacy RandomState: seeded here from the run's own seed, so that nothing global enters
     sampler.random_state = np.random.RandomState(np.random.MT19937(streams[1])).get_state()
     thin = max(1, dimension // 3)

@@ -50,8 +50,10 @@ class RunRecord:
         Which rows were fitted.
     table_noise, table_source, table_sha256 : str
         Noise type, file (or "shipped") and digest of the fraction table.
-    engine : str
-        Engine that sampled.
+    engine, engine_chosen : str
+        Engine that sampled, and why this one.
+    log_evidence, log_evidence_error : float
+        Log of the probability of the counts and its error; nan where the engine does not know.
     seed : int
         Seed of the run.
     created : str
@@ -90,6 +92,9 @@ class RunRecord:
     table_source: str
     table_sha256: str
     engine: str
+    engine_chosen: str
+    log_evidence: float
+    log_evidence_error: float
     seed: int
     created: str
     wall_seconds: float

@@ -7,7 +7,8 @@ import pytest
 from scipy.integrate import cumulative_trapezoid
 
 from hurstfit.engines.convergence import ess_quantile, mcse_quantile
-from hurstfit.engines.joint import INTERRUPTED, Chain, JointSettings, sample_joint
+from hurstfit.engines.chain import Chain
+from hurstfit.engines.joint import INTERRUPTED, JointSettings, sample_joint
 from hurstfit.errors import HurstfitError
 from hurstfit.posterior import Posterior
 from hurstfit.problem import load_problem

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+import functools
 import itertools
 import math
 from typing import Any
@@ -34,6 +35,12 @@ AXES = TableAxes(
 MASSES = [None, *AXES.masses]
 CRITERIA = ["zero", *(f"rate<{theta:g}" for theta in AXES.thresholds)]
 BUILD = Build("type-II", AXES, 10, BATCH_WALKS, 951)
+
+
+@functools.cache
+def shipped_table(noise: str) -> FractionTable:
+    """Load a table that ships, once."""
+    return load_table(noise)
 
 
 @pytest.fixture(scope="module")
@@ -156,7 +163,7 @@ def test_the_table_that_ships_interpolates_to_what_walks_do_between_its_nodes(no
     shipped = default_axes(noise)
     assert not set(axes.h) & set(shipped.h)
     assert not set(axes.steps) & set(shipped.steps)
-    table = load_table(noise)
+    table = shipped_table(noise)
     rng = np.random.default_rng(953)
     count = 16
     batches = np.array([simulate_batch(noise, axes, BATCH_WALKS, rng).fraction for _ in range(count)], dtype=float)
@@ -202,7 +209,7 @@ def test_scatter_moves_rates_across_the_threshold_as_it_does_single_walks(noise:
     measured = q * 10 ** (scatter * rng.standard_normal(size))
     quiescent = (rates[:, -1] == 0) | (measured < theta)
     p = quiescent.mean()
-    surface = load_table(noise).surface(Definition(None, parse_criterion(f"rate<{theta}"), scatter=scatter))
+    surface = shipped_table(noise).surface(Definition(None, parse_criterion(f"rate<{theta}"), scatter=scatter))
     # The error of the table is a fifth of that of these walks; 0.001 is left to interpolation in theta.
     assert abs(float(surface(H, n)) - p) < stats.norm.isf(FALSE_ALARM / 12) * 1.02 * math.sqrt(p * (1 - p) / size) + 1e-3
 
@@ -261,7 +268,7 @@ def test_replicates_carry_the_standard_error_and_the_correlations(
     ],
 )
 def test_replicates_of_the_table_that_ships_are_as_large_as_its_standard_errors(noise: str, definition: Definition) -> None:
-    table = load_table(noise)
+    table = shipped_table(noise)
     H, n = table.axes.h[5:-2, None], table.axes.steps[None, 8:]
     size = np.sqrt((table.deviations(definition)(H, n) ** 2).sum(axis=0))
     error = table.standard_error(H, n, str(definition.criterion), min_mass=definition.min_mass)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import functools
 import math
 
 import numpy as np
@@ -10,20 +11,27 @@ import pytest
 from hurstfit.fractions.axes import TableAxes
 from hurstfit.fractions.simulate import BATCH_WALKS, simulate_batch
 from hurstfit.fractions.store import load_table
+from hurstfit.fractions.table import FractionTable
 from hurstfit.walks import NOISE_TYPES
+
+
+@functools.cache
+def shipped_table(noise: str) -> FractionTable:
+    """Load a table that ships, once."""
+    return load_table(noise)
 
 
 @pytest.mark.parametrize("noise", NOISE_TYPES)
 @pytest.mark.parametrize("n", [550, 600, 650])
 def test_an_uncorrelated_walk_leaves_fewer_than_one_in_twenty_at_zero(noise: str, n: int) -> None:
     # Common practice, no source: fewer than 5 % at H = 1/2 and about 600 steps.  Among all walks.
-    assert 0.02 < float(load_table(noise).fraction(0.5, n)) < 0.05
+    assert 0.02 < float(shipped_table(noise).fraction(0.5, n)) < 0.05
 
 
 def test_an_exponent_of_0_92_leaves_about_one_in_six_at_zero() -> None:
     # Common practice, no source: effective H about 0.92 goes with about 16 % of all walks at zero at about 600 steps (type II).
     # "About" is taken as one per cent either way.
-    assert abs(float(load_table("type-II").fraction(0.92, 600)) - 0.16) < 0.01
+    assert abs(float(shipped_table("type-II").fraction(0.92, 600)) - 0.16) < 0.01
 
 
 def test_the_same_without_a_table() -> None:

@@ -78,7 +78,7 @@ def test_walks_on_the_other_noise_rest_at_zero_as_often(H: float) -> None:
 @pytest.mark.parametrize("H", [0.3, 0.75, 1.0, 1.3])
 def test_fractional_differences_of_type_2_are_white(H: float) -> None:
     # The definition (1 - B)^d X = e of Granger & Joyeux (1980) and Hosking (1981), d = H - 1/2, by the binomial series.
-    n, size = 40, 30_000
+    n, size = 30, 20_000
     x = draw_noise("type-II", H, n, size, np.random.default_rng(608))
     series = (-1.0) ** np.arange(n) * binom(H - 0.5, np.arange(n))
     innovations = lfilter(series, [1.0], x, axis=1)
