@@ -6,8 +6,8 @@ import numpy as np
 import pytest
 from scipy.integrate import cumulative_trapezoid
 
-from hurstfit.engines.convergence import ess_quantile, mcse_quantile
 from hurstfit.engines.chain import Chain
+from hurstfit.engines.convergence import ess_quantile, mcse_quantile
 from hurstfit.engines.joint import INTERRUPTED, JointSettings, sample_joint
 from hurstfit.errors import HurstfitError
 from hurstfit.posterior import Posterior

@@ -21,7 +21,8 @@ def record(small_run: Path) -> RunRecord:
 def assert_equal(a: RunRecord, b: RunRecord) -> None:
     for field in fields(RunRecord):
         ours, theirs = getattr(a, field.name), getattr(b, field.name)
-        assert np.array_equal(ours, theirs), field.name
+        # the evidence of the joint engine is nan
+        assert np.array_equal(ours, theirs, equal_nan=isinstance(ours, float)), field.name
         assert type(ours) is type(theirs), field.name
 
 
