@@ -101,22 +101,28 @@ def vet(path: Path) -> None:
 @click.option("--overwrite", is_flag=True, help="Replace the run file if it exists.")
 @click.option("--cross-check", is_flag=True, help="Run the other engine too and compare; exit status 1 if they disagree.")
 def infer(config: Path, out: Path | None, overwrite: bool, cross_check: bool) -> None:
-    """Sample the posterior of H for CONFIG and write a run file."""
+    """Compute the posterior of H for CONFIG and write a run file.
+
+    An interrupted run goes on where it stopped when the same command is given again.
+    """
     from hurstfit.digest.words import answer_lines, caution_lines, choice_lines, run_cautions, run_lines
-    from hurstfit.engines.joint import INTERRUPTED
     from hurstfit.inference import infer_problem
     from hurstfit.problem import load_problem
+    from hurstfit.runs.parts import parts_folder
 
     problem = load_problem(config)
     path = out or Path(problem.loaded.config.output.run or f"{config.stem}.h5")
     with _bar("sampling", problem.loaded.config.engine.max_steps, "moves") as bar:
-        progress = _shown_on(bar)
-        run = infer_problem(problem, path, overwrite=overwrite, progress=progress)
+        try:
+            run = infer_problem(problem, path, overwrite=overwrite, progress=_shown_on(bar))
+        except KeyboardInterrupt:
+            if not parts_folder(path).exists():
+                raise
+            _complain(f"interrupted; what was done is in {parts_folder(path)}: give the same command again to go on")
+            sys.exit(130)
     lines = ["", *answer_lines(run), "", "How", *run_lines(run), "", "What was fitted", *choice_lines(problem), ""]
     lines += caution_lines(run_cautions(run))
     _say([*lines, "", f"written: {path}   (next: hurstfit digest {path})"])
-    if run.record.stopped == INTERRUPTED:
-        sys.exit(130)
     if cross_check and not _cross_check(run):
         sys.exit(1)
 

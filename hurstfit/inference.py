@@ -15,6 +15,7 @@ from hurstfit.engines.joint import JointSettings
 from hurstfit.errors import HurstfitError
 from hurstfit.files import require_writable
 from hurstfit.problem import Problem, load_problem
+from hurstfit.runs.parts import fingerprint_of, opened_parts
 from hurstfit.runs.run import Run
 from hurstfit.runs.store import RunRecord, is_run_file, write_run
 from hurstfit.versions import versions
@@ -70,11 +71,31 @@ def infer_problem(
     engine = problem.loaded.config.engine
     settings = JointSettings(engine.seed, engine.walkers, engine.max_steps, engine.target_ess, engine.max_rhat)
     begun = time.perf_counter()
-    chain = run_engine(problem.posterior, engine.kind, settings, progress)
-    run = Run(_record(problem, settings, chain, time.perf_counter() - begun), path)
-    if path is not None:
+    if path is None:
+        chain = run_engine(problem.posterior, engine.kind, settings, progress)
+        return Run(_record(problem, settings, chain, time.perf_counter() - begun))
+    with opened_parts(path, _fingerprint(problem)) as parts:
+        chain = run_engine(problem.posterior, engine.kind, settings, progress, parts)
+        run = Run(_record(problem, settings, chain, time.perf_counter() - begun), path)
         write_run(path, run.record)
+        parts.remove()
     return run
+
+
+def _fingerprint(problem: Problem) -> str:
+    """Fingerprint of everything that determines the chain of a problem."""
+    loaded = problem.loaded
+    engine = loaded.config.engine.model_dump(exclude={"max_steps", "target_ess", "max_rhat"})
+    config = loaded.config.model_dump(exclude={"engine", "output"})
+    return fingerprint_of(
+        {
+            "config": config,
+            "engine": engine,
+            "measurements": problem.measurements.to_ecsv(),
+            "table": problem.table.digest,
+            **versions(),
+        }
+    )
 
 
 def cross_check(run: Run, progress: Callable[[int, str], None] | None = None) -> tuple[str, list[Comparison]]:

@@ -7,10 +7,12 @@ from dataclasses import replace
 
 import numpy as np
 
+from hurstfit.engines.blocks import Keeper
 from hurstfit.engines.chain import Chain
+from hurstfit.engines.conditionals import draw_conditionals
 from hurstfit.engines.convergence import assess
 from hurstfit.engines.joint import JointSettings, sample_joint
-from hurstfit.engines.quadrature import NotSettledError, draw_conditionals, integrate
+from hurstfit.engines.quadrature import NotSettledError, integrate
 from hurstfit.errors import HurstfitError
 from hurstfit.posterior import Posterior
 
@@ -25,7 +27,11 @@ COLUMNS = 4
 
 
 def run_engine(
-    posterior: Posterior, kind: str, settings: JointSettings, progress: Callable[[int, str], None] | None = None
+    posterior: Posterior,
+    kind: str,
+    settings: JointSettings,
+    progress: Callable[[int, str], None] | None = None,
+    keeper: Keeper | None = None,
 ) -> Chain:
     """Sample a posterior.
 
@@ -39,6 +45,8 @@ def run_engine(
         Seed, targets and limits.
     progress : callable, optional
         Called with the number of moves since the last call, and how far things are, in words.
+    keeper : Keeper, optional
+        Where the ensemble keeps finished blocks.
 
     Returns
     -------
@@ -50,13 +58,13 @@ def run_engine(
         If the quadrature was asked for by name and does not apply or settle.
     """
     if kind == "joint":
-        return sample_joint(posterior, settings, progress)
+        return sample_joint(posterior, settings, progress, keeper)
     try:
         return _by_quadrature(posterior, settings, progress)
     except NotSettledError as reason:
         if kind == "quadrature":
             raise HurstfitError(f'the quadrature engine cannot be used: {reason}; set kind = "joint" in [engine]') from reason
-        chain = sample_joint(posterior, settings, progress)
+        chain = sample_joint(posterior, settings, progress, keeper)
         return replace(chain, chosen=f"the quadrature cannot be used: {reason}")
 
 

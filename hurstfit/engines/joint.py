@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from hurstfit.engines.blocks import Block, Keeper
 from hurstfit.engines.chain import Chain
 from hurstfit.engines.convergence import Convergence, assess
 from hurstfit.engines.interrupts import interrupts_when_asked
@@ -29,6 +30,10 @@ INTERRUPTED = "the user interrupted"
 WARMUP_SHARE = 0.25
 #: Steps before convergence is first looked at.
 FIRST_LOOK = 500
+#: How much longer the chain is at each further look.
+LOOK_AGAIN = 1.3
+#: Stored steps of a block: what an interrupted run loses at most.
+BLOCK_STEPS = 250
 #: Stored steps below which an interrupted chain is not worth keeping.
 FEWEST_STEPS = 8
 
@@ -62,7 +67,12 @@ class JointSettings:
         return self.walkers if self.walkers is not None else max(32, 4 * dimension)
 
 
-def sample_joint(posterior: Posterior, settings: JointSettings, progress: Callable[[int, str], None] | None = None) -> Chain:
+def sample_joint(
+    posterior: Posterior,
+    settings: JointSettings,
+    progress: Callable[[int, str], None] | None = None,
+    keeper: Keeper | None = None,
+) -> Chain:
     """Sample all parameters until the stopping rule holds or the step limit is reached.
 
     Parameters
@@ -73,18 +83,20 @@ def sample_joint(posterior: Posterior, settings: JointSettings, progress: Callab
         Seed, ensemble and stopping rule.
     progress : callable, optional
         Called with the number of moves since the last call, and how far convergence is, in words.
+    keeper : Keeper, optional
+        Where finished blocks are kept; those that are there already are taken up, and the chain is the one that would have been.
 
     Returns
     -------
     Chain
-        Marked as not converged where the step limit was reached or the user interrupted.
+        Marked as not converged where the step limit was reached, or the user interrupted and nothing is kept.
 
     Raises
     ------
     HurstfitError
         If hardly any draw from the prior is possible at all.
     KeyboardInterrupt
-        If the user interrupts before there is anything to keep.
+        If the user interrupts, and finished blocks are kept or there is nothing to return.
     """
     import emcee
 
@@ -93,49 +105,80 @@ def sample_joint(posterior: Posterior, settings: JointSettings, progress: Callab
     if walkers % 2 or walkers < 2 * dimension:
         raise ValueError(f"walkers must be an even number of at least {2 * dimension} for {dimension} parameters, not {walkers}")
     streams = np.random.SeedSequence(settings.seed).spawn(2)
-    start = _starting_points(posterior, walkers, np.random.default_rng(streams[0]))
     sampler = emcee.EnsembleSampler(
         walkers, dimension, posterior.log_probability, vectorize=True, moves=ensemble_moves(dimension)
     )
-    # emcee draws from a legacy RandomState: seeded here from the run's own seed, so that nothing global enters
-    sampler.random_state = np.random.RandomState(np.random.MT19937(streams[1])).get_state()
     thin = max(1, dimension // 3)
-    state: Any = start
-    look_at, stopped, converged = FIRST_LOOK, "", False
+    blocks = keeper.finished() if keeper is not None else []
+    if blocks:
+        last = blocks[-1]
+        state = emcee.State(last.coordinates[-1], log_prob=last.log_probability[-1], random_state=last.random_state)
+    else:
+        # emcee draws from a legacy RandomState: seeded here from the run's own seed, so that nothing global enters
+        twister = np.random.RandomState(np.random.MT19937(streams[1])).get_state()
+        start = _starting_points(posterior, walkers, np.random.default_rng(streams[0]))
+        state = emcee.State(start, random_state=twister)
+    steps, step_limit = sum(block.coordinates.shape[0] for block in blocks), max(settings.max_steps // thin, 1)
+    if progress is not None and steps:
+        progress(steps * thin, "taken up again")
     found: tuple[Convergence, ...] = ()
-    words = "warming up"
+    words, look_at, stopped, converged = "warming up", FIRST_LOOK // thin, "", False
+    while look_at < steps:
+        look_at = int(look_at * LOOK_AGAIN)
     try:
         with interrupts_when_asked() as ask:
             while not stopped:
-                done = sampler.iteration * thin if sampler.iteration else 0
-                moves = min(look_at, settings.max_steps) - done
-                for state in sampler.sample(state, iterations=max(moves // thin, 1), thin_by=thin):  # noqa: B007, B020
-                    if progress is not None:
-                        progress(thin, words)
-                    ask()
-                found = _assess(sampler.get_chain(), posterior)
-                converged = _met(found, settings)
-                words = _how_far(found)
+                # the same looks at the same steps, whether or not the chain was ever interrupted
+                if steps >= min(look_at, step_limit):
+                    found = _assess(np.concatenate([block.coordinates for block in blocks]), posterior)
+                    converged, words = _met(found, settings), _how_far(found)
+                    look_at = int(look_at * LOOK_AGAIN)
                 if converged:
                     stopped = "the stopping rule was met"
-                elif sampler.iteration * thin + thin > settings.max_steps:
+                elif steps >= step_limit:
                     stopped = f"the step limit of {settings.max_steps} was reached"
-                look_at = int(sampler.iteration * thin * 1.3)
+                else:
+                    size = min(BLOCK_STEPS, look_at - steps, step_limit - steps)
+                    for state in sampler.sample(state, iterations=max(size, 1), thin_by=thin):  # noqa: B007, B020
+                        if progress is not None:
+                            progress(thin, words)
+                        ask()
+                    blocks.append(_block(sampler))
+                    steps += blocks[-1].coordinates.shape[0]
+                    if keeper is not None:
+                        keeper.keep(len(blocks) - 1, blocks[-1])
     except KeyboardInterrupt:
-        if sampler.iteration < FEWEST_STEPS:
+        if sampler.iteration:
+            blocks.append(_block(sampler))
+        if keeper is not None or sum(block.coordinates.shape[0] for block in blocks) < FEWEST_STEPS:
             raise
         stopped, converged = INTERRUPTED, False
-        found = _assess(sampler.get_chain(), posterior)
+        found = _assess(np.concatenate([block.coordinates for block in blocks]), posterior)
+    coordinates = np.concatenate([block.coordinates for block in blocks])
     return Chain(
-        sampler.get_chain(),
-        sampler.get_log_prob(),
-        sampler.backend.accepted.astype(np.int64),
-        _warmup(sampler.iteration),
+        coordinates,
+        np.concatenate([block.log_probability for block in blocks]),
+        np.sum([block.accepted for block in blocks], axis=0),
+        _warmup(coordinates.shape[0]),
         thin,
         found,
         converged,
         stopped,
     )
+
+
+def _block(sampler: Any) -> Block:
+    """Take what a sampler has done since it was last asked, and let it forget it."""
+    _, key, position, has_normal, normal = sampler.random_state
+    block = Block(
+        sampler.get_chain(),
+        sampler.get_log_prob(),
+        sampler.backend.accepted.astype(np.int64),
+        np.array(key, dtype=np.uint32),
+        (int(position), int(has_normal), float(normal)),
+    )
+    sampler.reset()
+    return block
 
 
 def ensemble_moves(dimension: int) -> list[tuple[object, float]]:

@@ -14,15 +14,14 @@ from concurrent.futures import Executor, Future, as_completed
 from dataclasses import dataclass
 from pathlib import Path
 
-import h5py
 import numpy as np
 
 from hurstfit.errors import HurstfitError
-from hurstfit.files import written_aside
 from hurstfit.fractions.axes import TableAxes
 from hurstfit.fractions.replicates import REPLICATES, Replicates
 from hurstfit.fractions.simulate import BATCH_WALKS, BatchResult, simulate_batch
 from hurstfit.fractions.table import FractionTable, with_exact_values
+from hurstfit.sealing import open_sealed, sealed_file
 from hurstfit.versions import versions
 from hurstfit.walks.noise import NOISE_TYPES
 
@@ -30,6 +29,8 @@ __all__ = ["Build", "average_batches", "run_build"]
 
 #: Fewer batches than this do not give a standard error worth the name.
 MIN_BATCHES = 8
+#: What the file of a finished batch is.
+KIND = "batch of walks"
 
 
 @dataclass(frozen=True)
@@ -157,6 +158,7 @@ def average_batches(build: Build, batches: Iterable[BatchResult]) -> FractionTab
     members = np.zeros(build.axes.shape[:3])
     groups = [np.zeros(build.axes.shape) for _ in range(min(REPLICATES, build.batches))]
     sizes = np.zeros(len(groups))
+    count = 0
     for count, batch in enumerate(batches, start=1):
         share = batch.fraction.astype(float)
         # Welford's update: batches agree to many digits
@@ -167,6 +169,8 @@ def average_batches(build: Build, batches: Iterable[BatchResult]) -> FractionTab
         group = (count - 1) % len(groups)
         groups[group] += share
         sizes[group] += 1
+    if count < max(len(groups), 2):
+        raise ValueError(f"{count} batches were given for a build of {build.batches}")
     errors = np.sqrt(squares / (count * (count - 1)))
     floor = (1.0 / np.maximum(members, 1.0))[..., None, None]
     errors = np.where((total == 0) | (total == 1), np.maximum(errors, floor), errors)
@@ -185,7 +189,7 @@ def _batch_path(folder: Path, batch: int) -> Path:
 
 
 def _write_batch(build: Build, folder: Path, batch: int, result: BatchResult) -> None:
-    with written_aside(_batch_path(folder, batch)) as aside, h5py.File(aside, "w") as file:
+    with sealed_file(_batch_path(folder, batch), KIND) as file:
         file.attrs["fingerprint"] = build.fingerprint()
         file["fraction"], file["members"] = result.fraction, result.members
 
@@ -193,10 +197,10 @@ def _write_batch(build: Build, folder: Path, batch: int, result: BatchResult) ->
 def _read_batch(build: Build, folder: Path, batch: int) -> BatchResult:
     path = _batch_path(folder, batch)
     try:
-        with h5py.File(path, "r") as file:
+        with open_sealed(path, KIND) as file:
             same = file.attrs["fingerprint"] == build.fingerprint()
             result = BatchResult(file["fraction"][...], file["members"][...])
-    except (OSError, KeyError) as error:
+    except (HurstfitError, KeyError) as error:
         raise HurstfitError(f"finished batch {path} cannot be read; remove it and start again") from error
     if not same:
         raise HurstfitError(f"{folder} holds batches of a build with other settings; finish that one or remove the folder")

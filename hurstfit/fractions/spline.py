@@ -28,7 +28,7 @@ def cardinal_weights(nodes: NDArray[np.float64], x: ArrayLike) -> NDArray[np.flo
     Parameters
     ----------
     nodes : ndarray, shape (n,)
-        Increasing nodes, n >= 4 (fewer: the polynomial through all of them).
+        Increasing nodes; with fewer than four, linear interpolation.
     x : array_like
         Where to interpolate, any shape.
 

@@ -1,6 +1,6 @@
 """The HDF5 file of a fraction table: the one place that knows its format.
 
-Root attributes: ``format`` = "hurstfit fraction table", ``format_version``, ``noise``, ``sha256``.  Group ``made_by``: one string
+Sealed, see :mod:`hurstfit.sealing`.  Root attributes: ``format_version``, ``noise``, ``sha256``.  Group ``made_by``: one string
 attribute for each setting and version.  Data sets: ``h``, ``steps``, ``masses``, ``scales``, ``thresholds`` (the axes),
 ``values`` and ``errors`` with the axes (H, steps, parent sample: all walks and then each of ``masses``, window scale, criterion:
 zero and then each of ``thresholds``); ``replicates`` (see :mod:`hurstfit.fractions.replicates`).  Values and errors are
@@ -14,21 +14,20 @@ import json
 from importlib import resources
 from pathlib import Path
 
-import h5py
 import numpy as np
 from numpy.typing import NDArray
 
 from hurstfit.errors import HurstfitError, did_you_mean
-from hurstfit.files import written_aside
 from hurstfit.fractions.axes import TableAxes
 from hurstfit.fractions.own import ModelTable, read_own_table
 from hurstfit.fractions.replicates import Replicates
 from hurstfit.fractions.table import FractionTable, with_exact_values
+from hurstfit.sealing import open_sealed, sealed_file
 from hurstfit.walks.noise import NOISE_TYPES
 
 __all__ = ["FORMAT_VERSION", "load_table", "read_table", "shipped_path", "write_table"]
 
-FORMAT = "hurstfit fraction table"
+KIND = "fraction table"
 FORMAT_VERSION = 1
 AXES = ("h", "steps", "masses", "scales", "thresholds")
 ARRAYS = ("values", "errors", "replicates")
@@ -44,9 +43,10 @@ def write_table(path: Path, table: FractionTable) -> None:
     table : FractionTable
         What to write.
     """
-    values, errors = (np.round(a, 6).astype(np.float32) for a in (table.values, table.errors))
-    with written_aside(path) as aside, h5py.File(aside, "w") as file:
-        file.attrs["format"] = FORMAT
+    # an error that is not exactly zero stays above zero
+    errors = np.where(table.errors > 0, np.maximum(table.errors, 1e-6), 0.0)
+    values, errors = (np.round(a, 6).astype(np.float32) for a in (table.values, errors))
+    with sealed_file(path, KIND) as file:
         file.attrs["format_version"] = FORMAT_VERSION
         file.attrs["noise"] = table.noise
         made_by = file.create_group("made_by")
@@ -73,12 +73,8 @@ def read_table(path: Path) -> FractionTable:
     HurstfitError
         If the file is missing, is not a fraction table, is of a newer version, or does not match its checksum.
     """
-    if not path.is_file():
-        raise HurstfitError(f"fraction table {path} does not exist")
     try:
-        with h5py.File(path, "r") as file:
-            if file.attrs.get("format") != FORMAT:
-                raise HurstfitError(f"{path} is an HDF5 file but not a fraction table")
+        with open_sealed(path, KIND) as file:
             version = int(file.attrs["format_version"])
             if version > FORMAT_VERSION:
                 raise HurstfitError(

@@ -116,14 +116,29 @@ class FractionTable:
         Errors at the nodes are interpolated linearly, which does not take credit for the averaging that interpolation does.
         """
         definition = _walk_definition(criterion, window, min_mass)
-        H, steps = np.broadcast_arrays(np.asarray(H, dtype=float), np.asarray(steps, dtype=float))
         self.require(H, steps)
-        errors = np.abs(self._collapse(self.errors, definition)[1][..., 0])
-        axes = (self._coordinate(self.axes.h), np.log(self.axes.steps), self._scales(definition))
-        points = (self._coordinate(H), np.log(steps), window_scale(window, steps))
+        return self.error_of(definition, H, steps, window)
+
+    def error_of(
+        self, definition: Definition, H: ArrayLike, steps: ArrayLike, window: ArrayLike = 1.0, threshold: ArrayLike = 1.0
+    ) -> NDArray[np.float64]:
+        """Give the simulation error of any definition within the table.
+
+        Parameters
+        ----------
+        definition : Definition
+            What the fraction counts.
+        H, steps, window, threshold : array_like
+            As for :meth:`surface`, broadcast against each other.
+        """
+        H, steps, window, threshold = np.broadcast_arrays(*(np.asarray(x, dtype=float) for x in (H, steps, window, threshold)))
+        thresholds, collapsed = self._collapse(self.errors, definition)
+        errors = np.abs(collapsed)
+        axes = (self._coordinate(self.axes.h), np.log(self.axes.steps), self._scales(definition), np.log(thresholds))
+        points = (self._coordinate(H), np.log(steps), window_scale(window, steps), np.log(threshold))
         corners = [_cell(axis, point) for axis, point in zip(axes, points, strict=True)]
         total = np.zeros(H.shape)
-        for corner in product((0, 1), repeat=3):
+        for corner in product((0, 1), repeat=4):
             index = tuple(np.minimum(first + c, axis.size - 1) for (first, _), c, axis in zip(corners, corner, axes, strict=True))
             weight = np.prod([share if c else 1 - share for (_, share), c in zip(corners, corner, strict=True)], axis=0)
             total += weight * errors[index]

@@ -20,6 +20,9 @@ __all__ = ["criterion_weights", "parent_weights"]
 SCATTER_POINTS, SCATTER_REACH = 241, 6.0
 #: Share of the scatter that may fall beyond the largest threshold of the table, where the fraction is taken as constant.
 BEYOND = 0.02
+#: Largest threshold that may be asked for.  Larger ones serve the convolution with scatter; over windows about as long as
+#: the walk they jump where the rate of a walk that never changed crosses them, which splines do not follow.
+LARGEST_THRESHOLD = 1.0
 
 
 def parent_weights(axes: TableAxes, definition: Definition, noise: str) -> NDArray[np.float64]:
@@ -78,15 +81,22 @@ def criterion_weights(axes: TableAxes, definition: Definition, noise: str) -> tu
             )
         return np.ones(1), np.eye(1, nodes.size + 1)
     if nodes.size < 4:
-        raise HurstfitError(f"the {noise} table holds the criterion zero only, not {definition.criterion}")
+        raise HurstfitError(f"the {noise} table holds too few thresholds for the criterion {definition.criterion}: {nodes.size}, not 4")
     if kind == "rate":
         theta = np.array([definition.criterion.limit])
-        if not nodes[0] <= theta[0] <= nodes[-1]:
+        if not nodes[0] <= theta[0] <= min(nodes[-1], LARGEST_THRESHOLD):
             raise HurstfitError(
-                f"the {noise} table holds the criterion zero and thresholds from {nodes[0]:g} to {nodes[-1]:g}, not {theta[0]:g}"
+                f"the {noise} table holds the criterion zero and thresholds from {nodes[0]:g} to "
+                f"{min(nodes[-1], LARGEST_THRESHOLD):g}, not {theta[0]:g}"
             )
     else:
-        theta = nodes if not definition.scatter else nodes[nodes <= nodes[-1] / 10 ** (2.1 * definition.scatter)]
+        highest = nodes[-1] / 10 ** (2.1 * definition.scatter) if definition.scatter else nodes[-1]
+        theta = nodes[nodes <= min(highest, LARGEST_THRESHOLD)]
+        if theta.size < 4:
+            raise HurstfitError(
+                f"the {noise} table holds too few thresholds for the criterion {definition.criterion} with a scatter of "
+                f"{definition.scatter:g} dex: {theta.size}, not 4"
+            )
     if not definition.scatter:
         return theta, np.concatenate([np.zeros((theta.size, 1)), _on_axis(np.log(nodes), np.log(theta))], axis=1)
     z = np.linspace(-SCATTER_REACH, SCATTER_REACH, SCATTER_POINTS)

@@ -1,6 +1,6 @@
 """The HDF5 file of a run: the one place that knows its format.
 
-Opens with plain h5py.  Root attributes: ``format`` = "hurstfit run", ``format_version``, and the fields of
+Sealed (:mod:`hurstfit.sealing`); opens with plain h5py.  Root attributes: ``format_version``, and the fields of
 :class:`RunRecord` that are single numbers or words.  Groups and data sets:
 
 * ``config``, ``measurements`` (ECSV): the inputs as text; ``used``: which rows of the measurements were fitted;
@@ -28,11 +28,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hurstfit.errors import HurstfitError
-from hurstfit.files import written_aside
+from hurstfit.sealing import kind_of, open_sealed, sealed_file
 
 __all__ = ["FORMAT_VERSION", "RunRecord", "is_run_file", "read_run", "write_run"]
 
-FORMAT = "hurstfit run"
+KIND = "run file"
 FORMAT_VERSION = 1
 
 
@@ -128,8 +128,8 @@ def write_run(path: Path, record: RunRecord) -> None:
         What to write.
     """
     steps, walkers, dimension = record.coordinates.shape
-    with written_aside(path) as aside, h5py.File(aside, "w") as file:
-        file.attrs["format"], file.attrs["format_version"] = FORMAT, FORMAT_VERSION
+    with sealed_file(path, KIND) as file:
+        file.attrs["format_version"] = FORMAT_VERSION
         for name in _ATTRIBUTES:
             file.attrs[name] = getattr(record, name)
         file.attrs["attributes_sha256"] = _sha256_of_attributes(vars(record))
@@ -159,14 +159,8 @@ def read_run(path: Path) -> RunRecord:
     HurstfitError
         If the file is missing, is not a run, is of a newer version, is damaged, or does not match a checksum.
     """
-    if path.is_dir():
-        raise HurstfitError(f"run file {path} is a directory; name a file that `infer` wrote")
-    if not path.is_file():
-        raise HurstfitError(f"run file {path} does not exist")
     try:
-        with h5py.File(path, "r") as file:
-            if file.attrs.get("format") != FORMAT:
-                raise HurstfitError(f"{path} is an HDF5 file but not a run of hurstfit")
+        with open_sealed(path, KIND) as file:
             version = int(file.attrs["format_version"])
             if version > FORMAT_VERSION:
                 raise HurstfitError(
@@ -197,11 +191,7 @@ def read_run(path: Path) -> RunRecord:
 
 def is_run_file(path: Path) -> bool:
     """Tell whether a file says that it is a run."""
-    try:
-        with h5py.File(path, "r") as file:
-            return bool(file.attrs.get("format") == FORMAT)
-    except OSError:
-        return False
+    return kind_of(path) == KIND
 
 
 def _put(group: h5py.Group, name: str, data: Any) -> None:
