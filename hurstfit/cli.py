@@ -53,6 +53,9 @@ class _Commands(click.Group):
         except KeyboardInterrupt:
             _complain("interrupted; nothing was written")
             ctx.exit(130)
+        except MemoryError as error:
+            _complain(f"out of memory ({error}); ask for fewer walkers, steps or bins")
+            ctx.exit(2)
         except OSError as error:
             # a full disk, say; whoever stops reading our output is click's business
             if error.errno == errno.EPIPE:
@@ -187,12 +190,13 @@ def consult(
 ) -> None:
     """Ask TABLE which H a fraction implies under each definition, and draw it.
 
-    TABLE is type-I or type-II for the tables that ship, or a file.
+    TABLE is type-I or type-II for the tables that ship, or a file.  A table of labelled models is compared with the fraction.
     """
     from hurstfit.clock import CosmicClock
     from hurstfit.cosmology import cosmology_from
-    from hurstfit.digest.tables import definitions_of, implied_lines, table_figure
+    from hurstfit.digest.tables import definitions_of, implied_lines, model_lines, table_figure
     from hurstfit.files import require_writable, written_aside
+    from hurstfit.fractions.own import ModelTable, read_own_table
     from hurstfit.fractions.store import load_table
 
     if fraction is None and figure is None:
@@ -202,10 +206,18 @@ def consult(
         if figure.suffix.lower() not in kinds:
             raise HurstfitError(f"--figure is {figure}; allowed are files that end in .png or .pdf")
         require_writable(figure, overwrite=overwrite, what="figure")
+    clock = CosmicClock.build(cosmology_from(cosmology, where="--cosmology"))
+    models = read_own_table(Path(table)) if Path(table).suffix.lower() == ".ecsv" else None
+    if isinstance(models, ModelTable):
+        if fraction is None or figure is not None or definition:
+            raise HurstfitError(
+                f"{table} holds labelled models, not H; ask it with --fraction, without --figure and --definition"
+            )
+        _say(model_lines(models, clock, fraction, redshift, step, z_start))
+        return
     loaded = load_table(table)
     definitions = definitions_of(loaded, definition)
     if fraction is not None:
-        clock = CosmicClock.build(cosmology_from(cosmology, where="--cosmology"))
         _say(implied_lines(loaded, definitions, clock, fraction, redshift, step, z_start))
     if figure is not None:
         drawn = table_figure(loaded, definitions, fraction)
@@ -237,9 +249,12 @@ def tabulate(
     merged into a more precise one.
     """
     from hurstfit.files import require_writable
-    from hurstfit.fractions.store import read_table, write_table
+    from hurstfit.fractions.store import KIND, read_table, write_table
+    from hurstfit.sealing import kind_of
 
     require_writable(out, overwrite=overwrite, what="fraction table")
+    if out.is_file() and out.stat().st_size and kind_of(out) != KIND:
+        raise HurstfitError(f"{out} is not a fraction table, so that it is not replaced by one; name another file")
     if merge:
         from hurstfit.fractions.merging import merge_tables
 
@@ -256,6 +271,7 @@ def tabulate(
 def _build(noise: str, out: Path, batches: int, walks: int, seed: int, workers: int) -> Any:
     """Simulate a table, write it, and remove the batches that it was made from."""
     from concurrent.futures import ProcessPoolExecutor
+    from multiprocessing import active_children
 
     from hurstfit.fractions.axes import default_axes
     from hurstfit.fractions.building import Build, remove_batches, run_build
@@ -271,6 +287,9 @@ def _build(noise: str, out: Path, batches: int, walks: int, seed: int, workers: 
             table = run_build(build, folder, executor, bar.update, keep=2 * workers)
         except KeyboardInterrupt:
             executor.shutdown(wait=False, cancel_futures=True)
+            # a batch takes up to half a minute, and who pressed Ctrl-C does not wait for it
+            for process in active_children():
+                process.terminate()
             _complain(f"interrupted; finished batches are in {folder}: give the same command again to go on")
             sys.exit(130)
     write_table(out, table)

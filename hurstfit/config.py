@@ -37,9 +37,9 @@ class MeasurementsTable(_Table):
 
 
 class WalkTable(_Table):
-    """[walk]: the construction of the noise, and a fraction table other than the one that ships."""
+    """[walk]: the construction of the noise, and a fraction table other than the one that ships; `own` is one of the user's."""
 
-    noise: Literal["type-I", "type-II"]
+    noise: Literal["type-I", "type-II", "own"]
     table: _Name | None = None
 
 
@@ -63,9 +63,12 @@ class ClockTable(_Table):
 
 
 class CountsTable(_Table):
-    """[counts]: the distribution of a count."""
+    """[counts]: the distribution of a count; what beta-binomial needs is `rho`, or `field_scatter` with `fields`."""
 
-    model: Literal["binomial"] = "binomial"
+    model: Literal["binomial", "beta-binomial"] = "binomial"
+    rho: Any = None
+    field_scatter: Any = None
+    fields: Any = None
 
 
 class ExponentTable(_Table):
@@ -79,9 +82,9 @@ class EngineTable(_Table):
     """[engine]: how the posterior is sampled, and when to stop."""
 
     kind: Literal["auto", "quadrature", "joint"] = "auto"
-    seed: Annotated[int, Field(ge=0)] = 1
-    walkers: Annotated[int, Field(ge=FEWEST_WALKERS)] | None = None
-    max_steps: Annotated[int, Field(ge=100)] = 100_000
+    seed: Annotated[int, Field(ge=0, lt=2**63)] = 1
+    walkers: Annotated[int, Field(ge=FEWEST_WALKERS, le=10_000)] | None = None
+    max_steps: Annotated[int, Field(ge=100, le=100_000_000)] = 100_000
     target_ess: Annotated[float, Field(ge=100)] = 2000.0
     max_rhat: Annotated[float, Field(gt=1.0, le=1.1)] = 1.01
 
@@ -166,7 +169,7 @@ def _read_text(path: Path) -> str:
     if path.is_dir():
         raise HurstfitError(f"configuration {path} is a directory; name a TOML file")
     try:
-        return path.read_text(encoding="utf-8")
+        return path.read_text(encoding="utf-8-sig")
     except FileNotFoundError as error:
         raise HurstfitError(f"configuration {path} does not exist") from error
     except UnicodeDecodeError as error:

@@ -22,9 +22,6 @@ from hurstfit.versions import versions
 
 __all__ = ["cross_check", "infer", "infer_problem"]
 
-#: What a run file may be called if it is to replace something that is no run: never a table or a configuration.
-RUN_ENDINGS = (".h5", ".hdf5")
-
 
 def infer(
     source: str | Path | Mapping[str, Any],
@@ -66,7 +63,7 @@ def infer_problem(
     """Sample a problem, write its run file where `path` is given, and return the run; parameters as in :func:`infer`."""
     if path is not None:
         require_writable(path, overwrite=overwrite, what="run file")
-        if path.exists() and path.suffix.lower() not in RUN_ENDINGS and not is_run_file(path):
+        if path.is_file() and path.stat().st_size and not is_run_file(path):
             raise HurstfitError(f"{path} is not a run file, so that it is not replaced by one; name another file")
     engine = problem.loaded.config.engine
     settings = JointSettings(engine.seed, engine.walkers, engine.max_steps, engine.target_ess, engine.max_rhat)

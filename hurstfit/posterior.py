@@ -8,13 +8,14 @@ sane.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
 
-from hurstfit.counts import BinomialCounts
+from hurstfit.counts import BetaBinomialCounts, BinomialCounts
+from hurstfit.dispersion import Dispersion
 from hurstfit.measurements import Measurements
 from hurstfit.prediction import BinPrediction
 from hurstfit.priors import Prior
@@ -50,6 +51,8 @@ class Posterior:
         H, step length (Myr), redshift at which walks start; a fixed prior makes any of them a constant.
     selection : dict of str to SelectionTerms
         Selection terms of each study.
+    dispersion : Dispersion
+        Scatter of the counts beyond the binomial; its correlation may be a parameter, ``rho``.
     """
 
     bins: Measurements
@@ -58,21 +61,35 @@ class Posterior:
     step: Parameter
     z_start: Parameter
     selection: dict[str, SelectionTerms]
+    dispersion: Dispersion = field(default_factory=Dispersion)
 
     @cached_property
     def counts(self) -> BinomialCounts:
-        """The counts of the bins."""
-        return BinomialCounts(self.bins.n_total, self.bins.n_quiescent)
+        """The counts of the bins, effective ones where a row is no count; at the mean of its prior where rho is free."""
+        effective, rho = self.bins.effective, self.dispersion.of(self.bins)
+        if not rho.any():
+            return BinomialCounts(effective.m, effective.x)
+        return BetaBinomialCounts(effective.m, effective.x, rho)
+
+    def counts_at(self, physical: Array) -> BinomialCounts:
+        """Give the counts of the bins under each vector of parameters, (vectors, parameters)."""
+        if "rho" not in self.names:
+            return self.counts
+        effective, rho = self.bins.effective, physical[:, self.names.index("rho"), None]
+        return BetaBinomialCounts(effective.m, effective.x, np.where(effective.counted, rho, 0.0))
 
     @cached_property
     def quantities(self) -> tuple[Parameter, ...]:
-        """All quantities that enter, fixed ones too: H, step, z_start, then the terms of each study that has bins."""
+        """All quantities that enter, fixed ones too: H, step, z_start, rho if free, then the terms of each study with bins."""
         terms = [
-            Parameter(f"{kind.name}[{study}]", self.selection[study].prior(kind.name), "", f"{kind.description}, {study}")
+            Parameter(f"{term}[{study}]", self.selection[study].prior(term), "", f"{TERMS[term].description}, {study}")
             for study in self.bins.studies
-            for kind in TERMS.values()
+            for term in self.selection[study].terms
         ]
-        return (self.exponent, self.step, self.z_start, *terms)
+        shared = [self.exponent, self.step, self.z_start]
+        if isinstance(self.dispersion.rho, Prior):
+            shared.append(Parameter("rho", self.dispersion.rho, "", "intra-class correlation of the counts of a bin"))
+        return (*shared, *terms)
 
     @cached_property
     def parameters(self) -> tuple[Parameter, ...]:
@@ -84,11 +101,19 @@ class Posterior:
         """Names of the free parameters."""
         return tuple(p.name for p in self.parameters)
 
+    @property
+    def shared_names(self) -> tuple[str, ...]:
+        """Names of the free parameters that all studies share: those of H, step, z_start and rho that are free."""
+        return tuple(name for name in self.names if "[" not in name)
+
     @cached_property
-    def _columns(self) -> dict[str, NDArray[np.intp]]:
-        """For each selection term, the column of the quantities that belongs to each bin."""
+    def _columns(self) -> tuple[tuple[NDArray[np.intp], ...], NDArray[np.bool_]]:
+        """For each of three selection terms, the quantity that belongs to each bin; and where the last is an impurity."""
         place = {q.name: i for i, q in enumerate(self.quantities)}
-        return {term: np.array([place[f"{term}[{study}]"] for study in self.bins.study]) for term in TERMS}
+        of_study = {study: [place[f"{term}[{study}]"] for term in self.selection[study].terms] for study in self.bins.studies}
+        columns = np.array([of_study[study] for study in self.bins.study.tolist()], dtype=np.intp).reshape(-1, 3)
+        impure = np.array([self.selection[study].impurity is not None for study in self.bins.study.tolist()], bool)
+        return tuple(columns.T), impure
 
     @cached_property
     def _layout(self) -> tuple[NDArray[np.intp], Array]:
@@ -132,10 +157,13 @@ class Posterior:
         return self.selected(fraction, physical), possible
 
     def selected(self, fraction: Array, physical: Array) -> Array:
-        """Apply selection to given true fractions, (vectors, bins)."""
+        """Apply selection to given true fractions, (vectors, bins); nan where an impurity is impossible."""
         full = self.complete(physical)
-        r, u, v = (full[:, self._columns[term]] for term in ("completeness_ratio", "missed_fraction", "contamination"))
-        return counted_fraction(fraction, r, u, v)
+        columns, impure = self._columns
+        r, u, v = (full[:, column] for column in columns)
+        if not impure.any():
+            return counted_fraction(fraction, r, u, v)
+        return counted_fraction(fraction, r, u, np.where(impure, 0.0, v), np.where(impure, v, 0.0))
 
     # -- densities -------------------------------------------------------------------------------------------------------------
 
@@ -153,7 +181,7 @@ class Posterior:
             -inf where a vector is impossible.
         """
         p, possible = self.counted_fractions(physical)
-        return np.where(possible, self.counts.log_likelihood(p), -np.inf)
+        return np.where(possible, self.counts_at(physical).log_likelihood(p), -np.inf)
 
     def log_prior(self, coordinates: Array) -> Array:
         """Log-density of the prior in sampling coordinates, normalised; shape (vectors,)."""

@@ -17,16 +17,18 @@ from numpy.typing import NDArray
 from hurstfit.clock import Z_MAX, CosmicClock
 from hurstfit.config import FEWEST_WALKERS, LoadedConfig, load_config
 from hurstfit.cosmology import cosmology_from
-from hurstfit.coverage import TAILS, check_steps, check_thresholds
+from hurstfit.coverage import TAILS, check_impurities, check_steps, check_thresholds
+from hurstfit.dispersion import parse_dispersion
 from hurstfit.errors import HurstfitError
 from hurstfit.fractions.definition import Definition, parse_criterion
 from hurstfit.fractions.store import load_table
-from hurstfit.fractions.table import FractionTable
+from hurstfit.fractions.table import OWN, FractionTable
 from hurstfit.measurements import Measurements, read_measurements
+from hurstfit.measurements.wording import measurement_cautions
 from hurstfit.posterior import Parameter, Posterior
 from hurstfit.prediction import BinPrediction
 from hurstfit.priors import Prior, Uniform, parse_prior
-from hurstfit.selection import TERMS, SelectionTerms, parse_selection
+from hurstfit.selection import SelectionTerms, parse_selection
 
 __all__ = ["Problem", "build_problem", "load_problem"]
 
@@ -116,6 +118,8 @@ def build_problem(loaded: LoadedConfig, measurements: Measurements, table: Fract
             "set keep_not_rising = true in [measurements] to fit them all the same"
         )
     bins = measurements.select(used)
+    if config.walk.noise == OWN and not config.walk.table:
+        raise HurstfitError(f"{name}, [walk] table is missing; noise = 'own' needs the file of your own fraction table (ECSV)")
     if table is None:
         table = load_table(loaded.folder / config.walk.table if config.walk.table else config.walk.noise)
     if table.noise != config.walk.noise:
@@ -137,8 +141,11 @@ def build_problem(loaded: LoadedConfig, measurements: Measurements, table: Fract
     prediction = BinPrediction(surface, definition, clock, bins.z_lo, bins.z_hi, fixed, latest)
     numbers, cautions = check_steps(name, bins, prediction, table, step_prior, start_prior)
     check_thresholds(name, prediction, table, start_prior)
-    cautions = [*_cautions(measurements, used, definition, selection), *cautions]
-    posterior = Posterior(bins, prediction, exponent, step, z_start, selection)
+    cautions = [*_cautions(measurements, used, definition, selection, table), *cautions]
+    counts = config.counts
+    dispersion = parse_dispersion(counts.model, counts.rho, counts.field_scatter, counts.fields, bins, where=f"{name}, [counts]")
+    posterior = Posterior(bins, prediction, exponent, step, z_start, selection, dispersion)
+    check_impurities(name, posterior)
     _check_ensemble(loaded, len(posterior.parameters))
     return Problem(loaded, measurements, used, table, definition, clock, posterior, numbers, tuple(cautions))
 
@@ -184,10 +191,20 @@ def _exponent_prior(loaded: LoadedConfig, table: FractionTable) -> Prior:
 
 
 def _cautions(
-    measurements: Measurements, used: NDArray[np.bool_], definition: Definition, selection: dict[str, SelectionTerms]
+    measurements: Measurements,
+    used: NDArray[np.bool_],
+    definition: Definition,
+    selection: dict[str, SelectionTerms],
+    table: FractionTable,
 ) -> list[str]:
     cautions = []
-    if definition.min_mass is None:
+    if table.noise == OWN:
+        cautions.append(
+            "the fraction table is your own: who is counted in it, and what counts as quiescent, must be what the measurements "
+            "count; "
+            + ("its errors are taken as independent between rows" if table.replicates else "its errors are not carried to H")
+        )
+    elif definition.min_mass is None:
         cautions.append(
             "all walks are counted, also those that formed next to nothing; a catalogue selected by stellar mass holds none of "
             "these, and its predicted fraction is lower: compare with min_mass = 0.1 in [galaxies]"
@@ -198,7 +215,7 @@ def _cautions(
             f"{outside} bins outside the rising regime are fitted because keep_not_rising = true: H may be biased there"
         )
     for study in measurements.select(used).studies:
-        silent = [term.replace("_", " ") for term in TERMS if term not in selection[study].stated]
+        silent = [term.replace("_", " ") for term in selection[study].terms if term not in selection[study].stated]
         if silent:
             cautions.append(f"study {study}: no {', '.join(silent)} is stated; assumed perfect")
-    return cautions
+    return [*cautions, *measurement_cautions(measurements.select(used))]

@@ -20,6 +20,8 @@ __all__ = ["NEGLIGIBLE_SHARE", "TableEffect", "table_effect"]
 
 #: Tables drawn.
 TABLES = 100
+#: Effective number of draws below which weights say no more than that the table's error is wider than the posterior.
+FEWEST_EFFECTIVE = 50.0
 #: Share of the posterior width below which the table's error is not worth a word.
 NEGLIGIBLE_SHARE = 0.02
 
@@ -36,11 +38,15 @@ class TableEffect:
         Standard deviation of H marginal over tables, over that with the table as it is.
     shifts : float
         Mean of H marginal over tables less that with the table as it is, in units of the posterior's standard deviation.
+    reliable : bool
+        False where hardly any draw is likely under some of the tables: the table's error is then wider than the posterior, and
+        the other numbers are too small.
     """
 
     moves: float
     widens: float
     shifts: float
+    reliable: bool
 
 
 def table_effect(posterior: Posterior, deviations: Surface, draws: NDArray[np.float64], rng: np.random.Generator) -> TableEffect:
@@ -63,23 +69,32 @@ def table_effect(posterior: Posterior, deviations: Surface, draws: NDArray[np.fl
     """
     full = posterior.complete(draws)
     fraction, _ = posterior.true_fractions(draws)
+    # antithetic pairs: the mean over tables is then free of the first-order term
+    normals = rng.standard_normal((TABLES // 2, deviations.coefficients.shape[0]))
+    replicates = deviations.coefficients
+    if replicates.shape[0] > normals.shape[0]:
+        # fewer tables than replicates: put the tables together first
+        replicates, normals = np.tensordot(normals, replicates, axes=1), np.eye(TABLES // 2)
     shifts = []
-    for coefficients in deviations.coefficients:
+    for coefficients in replicates:
         prediction = replace(posterior.prediction, surface=replace(deviations, coefficients=coefficients))
         shifts.append(prediction.averaged(full[:, 0], full[:, 1], full[:, 2])[0])
-    base = posterior.counts.log_likelihood(posterior.selected(fraction, draws))
+    counts = posterior.counts_at(draws)
+    base = counts.log_likelihood(posterior.selected(fraction, draws))
     H = full[:, 0]
     centre, width = H.mean(), H.std()
-    # antithetic pairs: the mean over tables is then free of the first-order term
-    normals = rng.standard_normal((TABLES // 2, len(shifts)))
-    means, total = [], np.zeros(H.size)
+    means, total, fewest = [], np.full(H.size, -np.inf), float(H.size)
     for z in np.concatenate([normals, -normals]):
         shifted = np.clip(fraction + np.tensordot(z, shifts, axes=1), 0.0, 1.0)
-        change = posterior.counts.log_likelihood(posterior.selected(shifted, draws)) - base
-        weights = np.exp(change)
-        total += weights
+        change = counts.log_likelihood(posterior.selected(shifted, draws)) - base
+        weights = np.exp(change - change.max())
+        total = np.logaddexp(total, change)
         means.append(np.average(H, weights=weights))
+        fewest = min(fewest, float(weights.sum() ** 2 / (weights**2).sum()))
+    total = np.exp(total - total.max())
     total /= total.sum()
     mean = float(total @ H)
     marginal = float(np.sqrt(total @ (H - mean) ** 2))
-    return TableEffect(float(np.std(means) / width), float(marginal / width), float((mean - centre) / width))
+    return TableEffect(
+        float(np.std(means) / width), float(marginal / width), float((mean - centre) / width), fewest >= FEWEST_EFFECTIVE
+    )

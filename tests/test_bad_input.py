@@ -130,7 +130,7 @@ BAD_CHANGES = {
     ),
     "unknown model": ({"clock": {"cosmology": "Plank18"}}, "[clock] cosmology", "'Plank18'", "did you mean 'Planck18'?"),
     "misspelt prior": ({"clock": {"step": {"nromal": [20, 2]}}}, "[clock] step", "'nromal'", "did you mean 'normal'?"),
-    "misspelt noise": ({"walk": {"noise": "type-2"}}, "[walk] noise", "'type-2'", "'type-I' or 'type-II'", "did you mean"),
+    "misspelt noise": ({"walk": {"noise": "type-2"}}, "[walk] noise", "'type-2'", "'type-I', 'type-II' or 'own'", "did you mean"),
     "prior outside its support": (
         {"exponent": {"prior": {"uniform": [0.05, 2.0]}}},
         "[exponent] prior",

@@ -47,7 +47,7 @@ def test_step_numbers_span_bins_and_priors(case) -> None:
 
 def test_an_impossible_part_of_the_prior_is_a_caution(case) -> None:
     problem = load_problem(case.config(clock={"z_start": {"uniform": [2.5, 16.0]}}))
-    assert any(caution.startswith("1 bins lie before the first step") for caution in problem.cautions)
+    assert any(caution.startswith("1 bin lies before the first step") for caution in problem.cautions)
 
 
 def test_all_walks_and_unstated_selection_are_cautions(case) -> None:

@@ -9,7 +9,7 @@ from hypothesis import strategies as st
 
 from hurstfit.errors import HurstfitError
 from hurstfit.priors import Beta, Fixed
-from hurstfit.selection import TERMS, SelectionTerms, counted_fraction, parse_selection
+from hurstfit.selection import SelectionTerms, counted_fraction, parse_selection
 
 share = st.floats(0.0, 1.0)
 ratio = st.floats(0.01, 100.0)
@@ -60,6 +60,46 @@ def test_all_arguments_broadcast() -> None:
     assert counted_fraction(np.full((4, 1), 0.2), np.ones(3), 0.0, np.zeros((2, 1, 1))).shape == (2, 4, 3)
 
 
+@given(share, ratio, share, share)
+def test_an_impurity_is_the_share_of_those_labelled_quiescent_that_are_star_forming(
+    f: float, r: float, u: float, v: float
+) -> None:
+    p = float(counted_fraction(f, r, u, v))
+    labelled_quiescent, labelled_starforming = f * r * (1 - u), (1 - f) * v
+    if labelled_quiescent > 1e-3:
+        k = labelled_starforming / (labelled_quiescent + labelled_starforming)
+        # a little less than what makes the contamination 1 to rounding
+        k *= 1 - 1e-12
+        assert counted_fraction(f, r, u, 0.0, k) == pytest.approx(p, rel=1e-8)
+
+
+@given(share, ratio, share, share)
+def test_an_impurity_gives_a_probability_exactly_where_its_contamination_is_one(f: float, r: float, u: float, k: float) -> None:
+    p = float(counted_fraction(f, r, u, 0.0, k))
+    enough = k < 1 and f * r * (1 - u) * k <= (1 - f) * (1 - k) * (1 + 1e-12)
+    assert 0 <= p <= 1 if not np.isnan(p) else not enough or f * r * (1 - u) * k == pytest.approx((1 - f) * (1 - k), rel=1e-9)
+    if k < 1 and f * r * (1 - u) * k > (1 - f) * (1 - k) * (1 + 1e-9):
+        assert np.isnan(p)
+
+
+def test_the_counted_fraction_with_an_impurity_is_that_of_a_simulated_catalogue() -> None:
+    rng = np.random.default_rng(12)
+    f, r, u, k, galaxies = 0.2, 0.8, 0.1, 0.15, 400_000
+    v = float(counted_fraction(f, r, u, 0.0, k)) * k * (f * r + 1 - f) / (1 - f)
+    quiescent = rng.random(galaxies) < f
+    found = rng.random(galaxies) < np.where(quiescent, r, 1.0)
+    labelled = rng.random(galaxies) < np.where(quiescent, 1 - u, v)
+    expected = float(counted_fraction(f, r, u, 0.0, k))
+    assert labelled[found].mean() == pytest.approx(expected, abs=4 * np.sqrt(expected / found.sum()))
+    impure = (~quiescent)[found & labelled].mean()
+    assert impure == pytest.approx(k, abs=4 * np.sqrt(k / (found & labelled).sum()))
+
+
+def test_no_impurity_is_no_contamination() -> None:
+    f = np.linspace(0, 1, 11)
+    assert counted_fraction(f, 1.3, 0.2, 0.0, 0.0) == pytest.approx(counted_fraction(f, 1.3, 0.2, 0.0), abs=1e-15)
+
+
 # -- reading -------------------------------------------------------------------------------------------------------------------
 
 STUDIES = ("A", "B")
@@ -84,12 +124,32 @@ def test_a_study_states_its_own_terms_and_takes_the_rest_from_the_default() -> N
 
 def test_terms_are_found_by_name() -> None:
     terms = parse({"A": {"completeness_ratio": 1.5}})["A"]
-    assert [terms.prior(name).mean for name in TERMS] == [1.5, 0.0, 0.0]
+    assert [terms.prior(name).mean for name in terms.terms] == [1.5, 0.0, 0.0]
+
+
+def test_an_impurity_stands_in_the_place_of_a_contamination() -> None:
+    terms = parse({"default": {"contamination": 0.1}, "B": {"impurity": {"beta": [2, 30]}}})
+    assert terms["A"].terms[2] == "contamination"
+    assert terms["B"].terms == ("completeness_ratio", "missed_fraction", "impurity")
+    assert terms["B"].impurity == Beta(2.0, 30.0)
+    assert terms["B"].stated == {"impurity"}
+    terms = parse({"default": {"impurity": 0.1}, "B": {"contamination": 0.2}})
+    assert (terms["A"].impurity, terms["B"].impurity, terms["B"].contamination) == (Fixed(0.1), None, Fixed(0.2))
+
+
+def test_a_study_has_no_term_that_it_does_not_use() -> None:
+    with pytest.raises(ValueError, match="no impurity"):
+        SelectionTerms().prior("impurity")
+    with pytest.raises(ValueError, match="either"):
+        SelectionTerms(contamination=Fixed(0.1), impurity=Fixed(0.1))
 
 
 @pytest.mark.parametrize(
     ("tables", "sentence"),
     [
+        ({"A": {"contamination": 0.1, "impurity": 0.1}}, r"\[selection.A\]: found both contamination and impurity"),
+        ({"A": {"impurity": 1.5}}, "from 0 to 1"),
+        ({"A": {"impurty": 0.1}}, r"unknown key 'impurty' \(did you mean 'impurity'\?\)"),
         ({"C": {}}, r"\[selection.C\]: bins.csv has no study of this name; it has A, B"),
         ({"A": 3}, r"\[selection\] A: found 3, allowed is a table"),
         ({"A": {"contaminaton": 0.1}}, r"unknown key 'contaminaton' \(did you mean 'contamination'\?\)"),

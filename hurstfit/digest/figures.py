@@ -73,6 +73,7 @@ def corner_figure(run: Run, names: tuple[str, ...] | None = None) -> Figure:
         label_kwargs={"fontsize": 11},
         labelpad=0.06,
     )
+    figure.text(0.98, 0.98, "dashed: 16, 50 and 84 %\ncontours: 68 and 95 %", ha="right", va="top", fontsize=9, color="0.3")
     if "H" in names:
         _draw_prior(run, figure.axes[names.index("H") * (len(names) + 1)])
     _mark_unconverged(run, figure)
@@ -90,7 +91,8 @@ def _draw_prior(run: Run, axes: Axes) -> None:
 def fraction_figure(run: Run) -> Figure:
     """Draw counted fractions against redshift, one panel a study, with what the posterior predicts for them.
 
-    Points are the counts with their 68 % binomial interval (Jeffreys).  Around each point stands the posterior of the
+    Points are the counts with their 68 % binomial interval (Jeffreys), or with the interval that the row quotes; a limit is a
+    point with a line over all that it allows.  Around each point stands the posterior of the
     probability that a catalogued galaxy of that bin is labelled quiescent (dark 68 %, light 95 %), selection included; the
     grey band is the true fraction of the walk at each redshift, without selection.
 
@@ -98,7 +100,6 @@ def fraction_figure(run: Run) -> Figure:
     -------
     matplotlib.figure.Figure
     """
-    from astropy.stats import binom_conf_interval
     from matplotlib.figure import Figure
 
     posterior = run.problem.posterior
@@ -112,8 +113,9 @@ def fraction_figure(run: Run) -> Figure:
     rows = -(-len(bins.studies) // columns)
     figure = Figure(figsize=(3.2 * columns + 0.6, 3.0 * rows + 0.7), layout="constrained")
     panels = figure.subplots(rows, columns, sharex=True, sharey=True, squeeze=False).ravel()
-    share = bins.n_quiescent / bins.n_total
-    ends = np.array(binom_conf_interval(bins.n_quiescent, bins.n_total, 0.6827, interval="jeffreys"))
+    out = run.problem.measurements.select(~run.problem.used)
+    share = bins.effective.fraction
+    ends = np.array(bins.effective.drawn_interval())
     for k, (study, axes) in enumerate(zip(bins.studies, panels, strict=False)):
         colour, marker = COLOURS[k % len(COLOURS)], MARKERS[k % len(MARKERS)]
         axes.fill_between(z, band[0], band[4], color="0.88", linewidth=0, label="true fraction, 95 %")
@@ -134,32 +136,40 @@ def fraction_figure(run: Run) -> Figure:
             markerfacecolor="white" if k % 2 else "black",
             markersize=4,
             elinewidth=1,
+            clip_on=False,
+            zorder=4,
             label="counted",
         )
+        others = out.study == study
+        if others.any():
+            middle = (out.z_lo[others] + out.z_hi[others]) / 2
+            axes.plot(middle, out.effective.fraction[others], marker, color="0.55", markerfacecolor="none", markersize=5)
         axes.set_title(study, fontsize=10)
     for axes in panels[len(bins.studies) :]:
         axes.set_visible(False)
-    top = max(hi95.max(), ends[1].max(), band[4].max())
+    top = max(hi95.max(), ends[1].max(), band[4].max(), out.effective.fraction.max(initial=0.0))
     panels[0].set_ylim(0, min(1.0, 1.15 * top))
     for axes in panels[::columns]:
         axes.set_ylabel("quiescent fraction")
     for axes in panels[max(0, len(bins.studies) - columns) : len(bins.studies)]:
         axes.set_xlabel("redshift $z$")
         axes.tick_params(labelbottom=True)
-    handles = _legend_handles()
+    handles = _legend_handles(bool(out.n_bins))
     figure.legend(handles=handles, loc="outside lower center", ncols=2, frameon=False, fontsize=8)
     _mark_unconverged(run, figure)
     return figure
 
 
-def _legend_handles() -> list[object]:
+def _legend_handles(some_left_out: bool) -> list[object]:
     from matplotlib.lines import Line2D
     from matplotlib.patches import Patch
 
+    left_out = Line2D([], [], color="0.55", marker="o", markerfacecolor="none", linestyle="none", label="not fitted")
     return [
-        Line2D([], [], color="black", marker="o", linestyle="none", markersize=4, label="counted, 68 % binomial interval"),
+        Line2D([], [], color="black", marker="o", linestyle="none", markersize=4, label="counted, 68 % or quoted interval"),
+        *([left_out] if some_left_out else []),
         (Patch(color="0.72", label="true fraction of the walk, 68 % (light: 95 %)")),
-        (Patch(color=COLOURS[0], alpha=0.5, label="predicted count, selection included, 68 % (light: 95 %)")),
+        (Patch(color=COLOURS[0], alpha=0.5, label="predicted counted fraction, selection included, 68 % (light: 95 %)")),
     ]
 
 

@@ -8,8 +8,13 @@ from collections.abc import Iterable
 
 import numpy as np
 
+from hurstfit.coverage import TAILS
+from hurstfit.digest.shape import shape_cautions
 from hurstfit.engines.convergence import mcse_quantile
 from hurstfit.engines.joint import INTERRUPTED
+from hurstfit.fractions.table import OWN
+from hurstfit.measurements.effective import FORMS
+from hurstfit.measurements.wording import number, summarise
 from hurstfit.posterior import Parameter
 from hurstfit.problem import Problem
 from hurstfit.runs.run import QUANTILES, Run
@@ -30,10 +35,8 @@ WIDTH = 110
 NOISE_WORDS = {
     "type-I": "type I, stationary fractional Gaussian noise",
     "type-II": "type II, fractionally integrated noise switched on at the first step",
+    OWN: "none: a fraction table of your own",
 }
-#: Share of the posterior within a hundredth of the prior's range from its edge above which it counts as piled up there
-#: (a flat posterior has 0.01).
-PILED_UP = 0.05
 #: Correlation of H with the step length from which the two count as degenerate.
 DEGENERATE = 0.5
 
@@ -47,7 +50,7 @@ def decimals(mcse: float) -> int:
 
 def labelled(label: str, text: str, indent: int = 17) -> list[str]:
     """One labelled statement, wrapped with a hanging indent."""
-    head = f"  {label}".ljust(indent)
+    head = f"  {label} ".ljust(indent)
     return textwrap.wrap(text, WIDTH, initial_indent=head, subsequent_indent=" " * indent, break_long_words=False) or [head]
 
 
@@ -56,17 +59,17 @@ def choice_lines(problem: Problem) -> list[str]:
     bins, table, posterior = problem.posterior.bins, problem.table, problem.posterior
     lo, hi = problem.step_numbers
     rows = problem.measurements.n_bins
-    quiescent, total = int(bins.n_quiescent.sum()), int(bins.n_total.sum())
     lines = labelled(
         "measurements",
-        f"{problem.measurements.path}: {bins.n_bins} of {rows} bins are fitted, {len(bins.studies)} studies, "
-        f"{quiescent:,} of {total:,} galaxies quiescent",
+        f"{problem.measurements.path}: {bins.n_bins} of {rows} bins are fitted, {len(bins.studies)} studies, {summarise(bins)}",
     )
     for text in problem.left_out():
         lines += labelled("left out", text)
+    lines += labelled("counts", _dispersion(problem))
     lines += labelled("noise", NOISE_WORDS[table.noise])
-    lines += labelled("parent sample", problem.definition.describe_parent())
-    lines += labelled("criterion", problem.definition.describe_criterion())
+    own = "as the table defines it"
+    lines += labelled("parent sample", own if table.noise == OWN else problem.definition.describe_parent())
+    lines += labelled("criterion", own if table.noise == OWN else problem.definition.describe_criterion())
     lines += labelled("cosmology", problem.clock.describe())
     lines += labelled("walk starts", f"at {_value_or_prior(posterior.z_start, 'redshift {}')}")
     lines += labelled("step", _value_or_prior(posterior.step, "{} Myr"))
@@ -74,10 +77,19 @@ def choice_lines(problem: Problem) -> list[str]:
     source = problem.loaded.config.walk.table or "the one that ships"
     lines += labelled(
         "fraction table",
-        f"{source}: H {table.axes.h[0]:g} to {table.axes.h[-1]:g}, steps {table.axes.steps[0]} to {table.axes.steps[-1]}, "
+        f"{source}: H {table.axes.h[0]:g} to {table.axes.h[-1]:g}, steps {table.axes.steps[0]:g} to {table.axes.steps[-1]:g}, "
         f"standard error up to {_table_error(problem):.1g} for these bins",
     )
     return lines
+
+
+def _dispersion(problem: Problem) -> str:
+    """Say how counts scatter, and which rows it is not added to."""
+    dispersion, counted = problem.posterior.dispersion, problem.posterior.bins.effective.counted
+    words = dispersion.describe()
+    if words == "binomial" or counted.all():
+        return words
+    return f"{words}; not added to {int((~counted).sum())} of {counted.size} bins, whose errors are taken to hold it"
 
 
 def _value_or_prior(parameter: Parameter, form: str) -> str:
@@ -89,10 +101,15 @@ def _value_or_prior(parameter: Parameter, form: str) -> str:
 
 
 def _table_error(problem: Problem) -> float:
-    d, axes = problem.definition, problem.table.axes
+    d, axes, posterior = problem.definition, problem.table.axes, problem.posterior
     lo, hi = problem.step_numbers
     steps = np.clip(np.geomspace(max(lo, 1.0), hi, 20), axes.steps[0], axes.steps[-1])
-    return float(problem.table.standard_error(axes.h[:, None], steps, str(d.criterion), d.window, d.min_mass).max())
+    # a window in Myr and a threshold on the specific rate follow the clock: here, a typical one
+    window = d.window / float(posterior.step.prior.mean) if d.window_unit == "Myr" else d.window
+    thresholds = np.ones(1)
+    if d.criterion.kind == "ssfr":
+        thresholds = np.geomspace(*posterior.prediction.threshold_range(posterior.z_start.prior.ppf(TAILS)), 5)
+    return float(problem.table.error_of(d, axes.h[:, None, None], steps[:, None], window, thresholds).max())
 
 
 def parameter_lines(problem: Problem) -> list[str]:
@@ -118,13 +135,17 @@ def bin_lines(problem: Problem) -> list[str]:
     centre = np.array([step.mean]), np.array([z_start.mean])
     lowest, highest = problem.posterior.prediction.step_range(*centre)
     width = max(5, *(len(s) for s in bins.study))
-    lines = [f"  row  {'study'.ljust(width)}  redshift     log mass       galaxies  quiescent  fraction  step number"]
+    effective = bins.effective
+    lines = [f"  row  {'study'.ljust(width)}  redshift     log mass       galaxies  quiescent  fraction  step number  read as"]
     for i in range(bins.n_bins):
+        steps = f"{lowest[i]:.0f}-{highest[i]:.0f}".ljust(11)
         lines.append(
             f"  {bins.rows[i]:3d}  {bins.study[i].ljust(width)}  {bins.z_lo[i]:4.2f}-{bins.z_hi[i]:4.2f}  "
-            f"{bins.logm_lo[i]:5.2f}-{bins.logm_hi[i]:5.2f}  {int(bins.n_total[i]):10,d}  {int(bins.n_quiescent[i]):9,d}  "
-            f"{bins.n_quiescent[i] / bins.n_total[i]:8.3f}  {lowest[i]:.0f}-{highest[i]:.0f}"
+            f"{bins.logm_lo[i]:5.2f}-{bins.logm_hi[i]:5.2f}  {number(effective.m[i]):>10}  {number(effective.x[i]):>9}  "
+            f"{effective.fraction[i]:8.3f}  {steps}  {FORMS[str(effective.form[i])]}"
         )
+    if (effective.form != "counts").any():
+        lines.append("  (of bins that are no counts, galaxies and quiescent are the effective numbers that enter)")
     return lines
 
 
@@ -147,13 +168,7 @@ def run_cautions(run: Run) -> list[str]:
         )
     if "H" in run.names:
         draws, prior = run.draws("H"), run.problem.posterior.exponent.prior
-        edges = prior.ppf(np.array([0.0, 0.01, 0.99, 1.0]))
-        for near, edge in ((draws < edges[1], edges[0]), (draws > edges[2], edges[3])):
-            if near.mean() > PILED_UP:
-                cautions.append(
-                    f"the posterior of H is piled up at the edge of its prior ({edge:g}): {near.mean():.0%} of it lies "
-                    "in the outermost 1 % of the prior, so that its median and intervals depend on where the prior ends"
-                )
+        cautions += shape_cautions(draws, prior)
         for clock in ("step", "z_start"):
             if clock in run.names:
                 correlation = float(np.corrcoef(draws, run.draws(clock))[0, 1])
@@ -162,11 +177,13 @@ def run_cautions(run: Run) -> list[str]:
                         f"H and {clock} are degenerate (correlation {correlation:+.2f}): H rests on the prior of {clock}"
                     )
     effect = run.table_effect
-    if effect is not None and effect.moves > NEGLIGIBLE_SHARE:
-        cautions.append(
-            f"the fraction table's own error moves H by {effect.moves:.1%} of its standard deviation, more than "
-            f"{NEGLIGIBLE_SHARE:.0%}: make a more precise table (hurstfit tabulate, with --merge) for counts as large as these"
-        )
+    if effect is not None and (effect.moves > NEGLIGIBLE_SHARE or not effect.reliable):
+        own = run.problem.table.noise == OWN
+        remedy = f"make a more precise table{'' if own else ' (hurstfit tabulate, with --merge)'}"
+        moves = f"moves H by {effect.moves:.1%} of its standard deviation, more than {NEGLIGIBLE_SHARE:.0%}"
+        if not effect.reliable:
+            moves = "is wider than the posterior of H, whose width is therefore far too small"
+        cautions.append(f"the fraction table's own error {moves}: {remedy} for counts as large as these")
     return [*cautions, *run.problem.cautions]
 
 

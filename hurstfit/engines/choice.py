@@ -69,6 +69,8 @@ def run_engine(
 
 
 def _by_quadrature(posterior: Posterior, settings: JointSettings, progress: Callable[[int, str], None] | None) -> Chain:
+    if "rho" in posterior.shared_names:
+        raise NotSettledError("the correlation rho of the counts is free, which it does not integrate over")
     report = (lambda words: progress(0, words)) if progress is not None else None
     marginal = integrate(posterior, report)
     if report is not None:

@@ -38,8 +38,11 @@ class Comparison:
 
     @property
     def z(self) -> NDArray[np.float64]:
-        """Differences in units of their errors."""
-        return (self.second - self.first) / self.errors
+        """Differences in units of their errors; where a parameter does not vary, 0 if it is the same and infinite if not."""
+        difference = self.second - self.first
+        known = np.isfinite(self.errors) & (self.errors > 0)
+        apart = np.where(difference == 0, 0.0, np.copysign(np.inf, difference))
+        return np.where(known, difference / np.where(known, self.errors, 1.0), apart)
 
     @property
     def agrees(self) -> bool:

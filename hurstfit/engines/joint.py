@@ -149,7 +149,10 @@ def sample_joint(
                         keeper.keep(len(blocks) - 1, blocks[-1])
     except KeyboardInterrupt:
         if sampler.iteration:
+            # between two moves nothing is half done: what there is of this block is a block too
             blocks.append(_block(sampler))
+            if keeper is not None:
+                keeper.keep(len(blocks) - 1, blocks[-1])
         if keeper is not None or sum(block.coordinates.shape[0] for block in blocks) < FEWEST_STEPS:
             raise
         stopped, converged = INTERRUPTED, False

@@ -69,7 +69,10 @@ class Build:
     def settings(self) -> dict[str, str]:
         """Everything that determines the numbers, as text for the file."""
         return {
-            "command": (f"hurstfit tabulate {self.noise} --batches {self.batches} --walks {self.batch_walks} --seed {self.seed}"),
+            "command": (
+                f"hurstfit tabulate {self.noise} --batches {self.batches} --walks {self.batch_walks} --seed {self.seed} "
+                f"--out {self.noise}.h5"
+            ),
             "noise": self.noise,
             "batches": str(self.batches),
             "walks_per_batch": str(self.batch_walks),

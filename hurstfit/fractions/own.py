@@ -1,8 +1,9 @@
 """Tables that users bring: fractions measured elsewhere, say on a hydrodynamic simulation, as ECSV.
 
 Columns ``H``, ``steps``, ``fraction``, ``error`` on a complete grid make a :class:`FractionTable` of noise "own", which `infer`
-takes in place of a simulated one; what is counted in it, and as what, is its author's business.  With a column ``model`` (a
-label) instead of ``H`` they make a :class:`ModelTable`, which predicts but has no H to infer.
+takes in place of a simulated one; what is counted in it, and as what, is its author's business.  Its errors are taken as
+independent between rows.  With a column ``model`` (a label) instead of ``H`` they make a :class:`ModelTable`, which
+predicts but has no H to infer.
 """
 
 from __future__ import annotations
@@ -16,10 +17,11 @@ from numpy.typing import ArrayLike, NDArray
 
 from hurstfit.errors import HurstfitError, did_you_mean
 from hurstfit.fractions.axes import TableAxes
+from hurstfit.fractions.replicates import Replicates
 from hurstfit.fractions.spline import Axis
 from hurstfit.fractions.table import OWN, FractionTable
 
-__all__ = ["ModelTable", "read_own_table"]
+__all__ = ["ModelTable", "is_own_table", "read_own_table"]
 
 NUMBERS = ("steps", "fraction", "error")
 #: A cubic spline needs four nodes along each axis.
@@ -53,18 +55,37 @@ class ModelTable:
         HurstfitError
             For an unknown model, or steps outside the table.
         """
+        row, steps = self._found(model, steps)
+        axis = Axis(np.log(self.steps))
+        return np.clip(axis.dense_basis(np.log(steps)) @ axis.coefficients(self.values[row], 0), 0.0, 1.0)
+
+    def standard_error(self, model: str, steps: ArrayLike) -> NDArray[np.float64]:
+        """Give the standard error of :meth:`fraction`, linear in ln(steps) between nodes."""
+        row, steps = self._found(model, steps)
+        return np.interp(np.log(steps), np.log(self.steps), self.errors[row])
+
+    def _found(self, model: str, steps: ArrayLike) -> tuple[int, NDArray[np.float64]]:
         if model not in self.models:
             raise HurstfitError(
                 f"no model {model!r} in the table; it has {', '.join(self.models)}{did_you_mean(model, self.models)}"
             )
         steps = np.asarray(steps, dtype=float)
-        if not np.all((steps >= self.steps[0]) & (steps <= self.steps[-1])):
+        bad = ~((steps >= self.steps[0]) & (steps <= self.steps[-1]))
+        if bad.any():
             raise HurstfitError(
-                f"the table holds step numbers from {self.steps[0]:g} to {self.steps[-1]:g}, not all of {steps!r}"
+                f"the table holds step numbers from {self.steps[0]:g} to {self.steps[-1]:g}, not {steps[bad].ravel()[0]:g}"
             )
-        axis = Axis(np.log(self.steps))
-        coefficients = axis.coefficients(self.values[self.models.index(model)], 0)
-        return np.clip(axis.dense_basis(np.log(steps)) @ coefficients, 0.0, 1.0)
+        return self.models.index(model), steps
+
+
+def is_own_table(path: Path) -> bool:
+    """Tell from its column names whether an ECSV file is meant to be a fraction table."""
+    try:
+        with path.open(encoding="utf-8") as file:
+            names = next((line for line in file if line.strip() and not line.startswith("#")), "").replace(",", " ").split()
+    except (OSError, UnicodeDecodeError):
+        return False
+    return "steps" in names and ("H" in names or "model" in names)
 
 
 def read_own_table(path: Path) -> FractionTable | ModelTable:
@@ -112,7 +133,10 @@ def read_own_table(path: Path) -> FractionTable | ModelTable:
     _check(path, "error", error, (error < 0) | (error > 1), "a standard error from 0 to 1")
     digest = hashlib.sha256(path.read_bytes()).hexdigest()
     if leading == ["model"]:
-        labels = np.array([str(label) for label in table["model"]])
+        labels = np.array(["" if label is np.ma.masked else str(label).strip() for label in table["model"]], dtype=str)
+        blank = np.flatnonzero(labels == "")
+        if blank.size:
+            raise HurstfitError(f"{path}, row {blank[0] + 1}: model is blank; allowed is a label")
         models, grid_steps, index = _grid(path, "model", labels, steps, 1)
         return ModelTable(tuple(models.tolist()), grid_steps, fraction[index], error[index])
     H = _numbers(path, table, "H")
@@ -121,18 +145,23 @@ def read_own_table(path: Path) -> FractionTable | ModelTable:
     # one definition only: the same for "all walks" and for the first parent sample, which the axes require
     values, errors = (np.repeat(a[index][:, :, None, None, None], 2, axis=2) for a in (fraction, error))
     axes = TableAxes(h, grid_steps, np.zeros(1), np.zeros(1), np.zeros(0))
-    return FractionTable(OWN, axes, values, errors, {"command": f"read from {path.name}"}, digest)
+    made_by = {"command": f"read from {path.name}"}
+    return FractionTable(OWN, axes, values, errors, made_by, digest, Replicates.independent(axes))
 
 
 def _numbers(path: Path, table: object, name: str) -> NDArray[np.float64]:
     column = table[name]  # type: ignore[index]
+    if column.unit is not None and str(column.unit):
+        raise HurstfitError(f"{path}: the column {name!r} has the unit {column.unit}; allowed are plain numbers")
     masked = np.flatnonzero(np.ma.getmaskarray(np.ma.asarray(column)))
     if masked.size:
         raise HurstfitError(f"{path}, row {masked[0] + 1}: {name} is blank; allowed is a finite number")
-    try:
-        values = np.asarray(column, dtype=float)
-    except (TypeError, ValueError) as problem:
-        raise HurstfitError(f"{path}: the column {name!r} holds text; allowed are numbers") from problem
+    if column.dtype.kind not in "iuf" or column.ndim != 1:
+        kind = {"U": "text", "S": "text", "b": "true and false"}.get(
+            column.dtype.kind, f"{column.dtype} of {column.ndim} dimensions"
+        )
+        raise HurstfitError(f"{path}: the column {name!r} holds {kind}; allowed are numbers")
+    values = np.asarray(column, dtype=float)
     _check(path, name, values, ~np.isfinite(values), "a finite number")
     return values
 

@@ -66,6 +66,18 @@ class Replicates:
         return cls._packed(axes, deviations, errors[kept])
 
     @classmethod
+    def independent(cls, axes: TableAxes) -> Replicates | None:
+        """One replicate for each node of H and steps, where errors are independent of each other; None for too many nodes."""
+        nodes = axes.shape[0] * axes.shape[1]
+        unit = round(RESOLUTION * np.sqrt(nodes - 1))
+        if unit > np.iinfo(np.int8).max:
+            return None
+        kept = tuple(k.size for k in _nodes_kept(axes))
+        units = np.zeros((nodes, nodes, *kept), dtype=np.int8)
+        units[np.arange(nodes), np.arange(nodes)] = unit
+        return cls(axes, units.reshape(nodes, *axes.shape[:2], *kept))
+
+    @classmethod
     def _packed(cls, axes: TableAxes, deviations: NDArray[np.float64], errors: NDArray[np.float64]) -> Replicates:
         units = RESOLUTION * deviations / np.where(errors > 0, errors, np.inf)
         return cls(axes, np.clip(np.round(units), -127, 127).astype(np.int8))
@@ -83,9 +95,13 @@ class Replicates:
             Standard errors of the two tables and of the mean.
         """
         kept = np.ix_(*(np.arange(n) for n in self.axes.shape[:2]), *_nodes_kept(self.axes))
-        both = zip((self, other), shares, errors, strict=False)
-        total = sum(share * table.units / RESOLUTION * error[kept] for table, share, error in both)
-        return self._packed(self.axes, np.asarray(total), errors[2][kept])
+        # a table of fewer replicates gets empty ones: its covariance is the same
+        count = max(self.units.shape[0], other.units.shape[0])
+        total = np.zeros((count, *self.units.shape[1:]))
+        for table, share, error in zip((self, other), shares, errors[:2], strict=True):
+            scale = share / RESOLUTION * np.sqrt((count - 1) / (table.units.shape[0] - 1))
+            total[: table.units.shape[0]] += scale * table.units * error[kept]
+        return self._packed(self.axes, total, errors[2][kept])
 
     def deviations(
         self,

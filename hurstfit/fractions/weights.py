@@ -14,7 +14,7 @@ from hurstfit.fractions.axes import TableAxes
 from hurstfit.fractions.definition import Definition
 from hurstfit.fractions.spline import cardinal_weights
 
-__all__ = ["criterion_weights", "parent_weights"]
+__all__ = ["LARGEST_THRESHOLD", "criterion_weights", "parent_weights"]
 
 #: Points, and half-width in standard deviations, of the convolution with scatter.
 SCATTER_POINTS, SCATTER_REACH = 241, 6.0
@@ -65,7 +65,8 @@ def criterion_weights(axes: TableAxes, definition: Definition, noise: str) -> tu
     Returns
     -------
     thresholds : ndarray, shape (m,)
-        Values of theta that the weights are for: one, or for the criterion ``ssfr``, whose theta varies, all of the table's.
+        Values of theta that the weights are for: one, or for the criterion ``ssfr``, whose theta varies, all nodes
+        that scatter leaves.
     weights : ndarray, shape (m, n_thresholds + 1)
 
     Raises
@@ -81,7 +82,9 @@ def criterion_weights(axes: TableAxes, definition: Definition, noise: str) -> tu
             )
         return np.ones(1), np.eye(1, nodes.size + 1)
     if nodes.size < 4:
-        raise HurstfitError(f"the {noise} table holds too few thresholds for the criterion {definition.criterion}: {nodes.size}, not 4")
+        raise HurstfitError(
+            f"the {noise} table holds too few thresholds for the criterion {definition.criterion}: {nodes.size}, not 4"
+        )
     if kind == "rate":
         theta = np.array([definition.criterion.limit])
         if not nodes[0] <= theta[0] <= min(nodes[-1], LARGEST_THRESHOLD):
@@ -90,8 +93,7 @@ def criterion_weights(axes: TableAxes, definition: Definition, noise: str) -> tu
                 f"{min(nodes[-1], LARGEST_THRESHOLD):g}, not {theta[0]:g}"
             )
     else:
-        highest = nodes[-1] / 10 ** (2.1 * definition.scatter) if definition.scatter else nodes[-1]
-        theta = nodes[nodes <= min(highest, LARGEST_THRESHOLD)]
+        theta = nodes if not definition.scatter else nodes[nodes <= nodes[-1] / 10 ** (2.1 * definition.scatter)]
         if theta.size < 4:
             raise HurstfitError(
                 f"the {noise} table holds too few thresholds for the criterion {definition.criterion} with a scatter of "

@@ -1,12 +1,12 @@
 """Effective counts: the pair of numbers whose Beta distribution has a quoted interval.
 
-A count of x in m tells of a proportion what Beta(x + 1, m - x + 1) says: the posterior under a flat prior, whose quantiles are good
-intervals also where the normal approximation is not (Cameron 2011, PASA 28, 128).  Read backwards, a published interval gives the pair
-(x, m) that carries the same information, its skewness included.  The pair need not be whole numbers; only 0 <= x <= m is asked, so
-that the likelihood p^x (1 - p)^(m - x) has its maximum within 0..1.
+A count of x in m tells of a proportion what Beta(x + 1, m - x + 1) says: the posterior under a flat prior, whose quantiles
+are good intervals also where the normal approximation is not (Cameron 2011, PASA 28, 128).  Read backwards, a published
+interval gives the pair (x, m) that carries the same information, its skewness included.  The pair need not be whole numbers;
+only 0 <= x <= m is asked, so that the likelihood p^x (1 - p)^(m - x) has its maximum within 0..1.
 
-Two quantiles determine a Beta distribution (Shih 2015, Stat. Probab. Lett. 105, 83).  Where that one has x < 0 or x > m, the closest pair has
-x = 0 or x = m, and what it misses is reported.
+Two quantiles determine a Beta distribution (Shih 2015, Stat. Probab. Lett. 105, 83).  Where that one has x < 0 or x > m, the
+closest pair has x = 0 or x = m, and what it misses is reported.
 """
 
 from __future__ import annotations
@@ -95,15 +95,15 @@ def beta_pairs(lo: ArrayLike, hi: ArrayLike, level: ArrayLike) -> BetaPairs:
         raise ValueError("beta_pairs needs lo < hi and levels between 0 and 1")
     # rows of a table repeat themselves, since published numbers are rounded
     distinct, back = np.unique(wanted, axis=1, return_inverse=True)
-    lo, hi, level = distinct
-    a, b = _exact(lo, hi, level)
+    below, above, inner = distinct
+    a, b = _exact(below, above, inner)
     inside = (a >= 1) & (b >= 1)
-    edge_a, edge_b = _edge(lo[~inside], hi[~inside], level[~inside])
-    a[~inside], b[~inside] = edge_a, edge_b
+    a[~inside], b[~inside] = _edge(below[~inside], above[~inside], inner[~inside])
     back = np.asarray(back).reshape(-1)
-    x, m = (a - 1)[back], (a + b - 2)[back]
-    found = beta_interval(a - 1, a + b - 2, level)
-    misfit = np.maximum(np.abs(found[0] - lo), np.abs(found[1] - hi)) / ((hi - lo) / 2)
+    # a sum of its parts, so that x is never above m by rounding
+    x, m = (a - 1)[back], ((a - 1) + (b - 1))[back]
+    found = beta_interval(a - 1, (a - 1) + (b - 1), inner)
+    misfit = np.maximum(np.abs(found[0] - below), np.abs(found[1] - above)) / ((above - below) / 2)
     return BetaPairs(x, m, found[0][back], found[1][back], misfit[back])
 
 
@@ -137,7 +137,8 @@ def _exact(lo: Array, hi: Array, level: Array) -> tuple[Array, Array]:
         close = np.abs(_residual(theta, lo[todo], hi[todo], level[todo])).max(axis=0) < 1e-5
         result[:, todo[close]] = np.exp(theta[:, close])
     # a pair on the edge itself, such as that of no galaxy in ten, must not fall off it by rounding
-    return tuple(np.where(np.abs(v - 1) < 1e-7, 1.0, v) for v in result)  # type: ignore[return-value]
+    result = np.where(np.abs(result - 1) < 1e-7, 1.0, result)
+    return result[0], result[1]
 
 
 def _residual(theta: Array, lo: Array, hi: Array, level: Array) -> Array:

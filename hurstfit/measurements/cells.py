@@ -13,7 +13,7 @@ from __future__ import annotations
 import csv
 import re
 import warnings
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import NoReturn
 
 from hurstfit.errors import HurstfitError
@@ -35,11 +35,14 @@ class Cells:
         Cells without surrounding spaces, all columns equally long.
     units : dict of str to str
         Units of those columns that state one.
+    meta : dict of str to object
+        What the file says of the table as a whole, by name in lower case.
     """
 
     path: str
     columns: dict[str, list[str]]
     units: dict[str, str]
+    meta: dict[str, object] = field(default_factory=dict)
 
     @property
     def n_rows(self) -> int:
@@ -89,8 +92,9 @@ def split_table(text: str, path: str) -> Cells:
     lines = [line.strip(" \t") for line in text.replace("\r\n", "\n").replace("\r", "\n").split("\n")]
     first = next((i for i, line in enumerate(lines) if line and not line.startswith("#")), None)
     delimiter, declared = ",", None
+    meta: dict[str, object] = {}
     if is_ecsv(text):
-        delimiter, declared = _ecsv_header([line for line in lines[:first] if line.startswith("#")], path)
+        delimiter, declared, meta = _ecsv_header([line for line in lines[:first] if line.startswith("#")], path)
     if first is None:
         refuse(path, "the file is empty; allowed is a table with a line of column names and one row a bin")
     # Line ends are kept, so that a quoted cell that runs over several lines shows as such instead of growing together.
@@ -103,7 +107,7 @@ def split_table(text: str, path: str) -> Cells:
         _refuse_ragged(names, rows, delimiter, path)
     columns = dict(zip(names, map(list, zip(*rows, strict=True)) if rows else ([] for _ in names), strict=True))
     units = {name: unit for name, unit in (declared or {}).items() if unit is not None}
-    return Cells(path, columns, units)
+    return Cells(path, columns, units, meta)
 
 
 def _split_lines(lines: list[str], delimiter: str, path: str) -> list[list[str]]:
@@ -140,8 +144,8 @@ def _refuse_ragged(names: list[str], rows: list[list[str]], delimiter: str, path
     refuse(path, f"found {cells}; allowed are {len(names)}, one for each column{hint}", row=i + 1)
 
 
-def _ecsv_header(lines: list[str], path: str) -> tuple[str, dict[str, str | None]]:
-    """Read delimiter, names and units from the header of an ECSV file; its free metadata is passed over."""
+def _ecsv_header(lines: list[str], path: str) -> tuple[str, dict[str, str | None], dict[str, object]]:
+    """Read delimiter, names with units, and free metadata from the header of an ECSV file."""
     from astropy.io.misc import yaml
 
     problem = "the ECSV header cannot be read ({}); allowed is the header that astropy writes"
@@ -172,7 +176,12 @@ def _ecsv_header(lines: list[str], path: str) -> tuple[str, dict[str, str | None
         if name in declared:
             refuse(path, f"the column {show(name)} appears twice; allowed is each column once")
         declared[name] = None if unit is None else str(unit)
-    return delimiter, declared
+    try:
+        # a mapping, or, where the header keeps their order (!!omap), pairs
+        meta = {str(key).lower(): value for key, value in dict(header.get("meta") or {}).items()}
+    except (TypeError, ValueError):
+        refuse(path, problem.format("its 'meta' are no names with values"))
+    return delimiter, declared, meta
 
 
 def _list(names: object) -> str:

@@ -1,14 +1,15 @@
 """What each row says about its fraction: effective counts, whatever form the row has.
 
-Every row enters the likelihood as a pair (x, m), 0 <= x <= m, in the kernel x log p + (m - x) log(1 - p).  A count is its own pair; a
-fraction with its N, or with an effective N, has m = N and x = f N; an error bar becomes the pair whose Beta distribution has the quoted
-interval (:mod:`hurstfit.measurements.beta_pair`); a limit is none, or all, of m.
+Every row enters the likelihood as a pair (x, m), 0 <= x <= m, in the kernel x log p + (m - x) log(1 - p).  A count is its
+own pair; a fraction with its N, or with an effective N, has m = N and x = f N; an error bar becomes the pair whose Beta
+distribution has the quoted interval (:mod:`hurstfit.measurements.beta_pair`); a limit is none, or all, of m.
 
-Where an error bar comes with an N, the two are compared.  Errors that agree with the binomial of N say nothing more than N does, and
-the pair is (f N, N).  Larger ones hold more than counting, such as the scatter between fields, and the pair is that of the interval.
-Smaller ones cannot be.  "Agree" allows for rounding, of half a unit in the last digit that the row quotes (not fewer than two decimals), and
-for the recipes in use: the normal approximation, Wilson's (1927), Jeffreys' and the flat prior's (Brown, Cai & DasGupta 2001, Stat.
-Sci. 16, 101).
+Where an error bar comes with an N, the two are compared.  Errors that agree with the binomial of N say nothing more than N
+does, and the pair is (f N, N).  Larger ones hold more than counting, such as the scatter between fields, and the pair is
+that of the interval. Smaller ones cannot be.  "Agree" allows for rounding, of half a unit in the last digit that the row
+quotes (not fewer than two decimals), and
+for the recipes in use: the normal approximation, Wilson's (1927), Jeffreys' and the flat prior's (Brown, Cai & DasGupta
+2001, Stat. Sci. 16, 101).
 """
 
 from __future__ import annotations
@@ -17,7 +18,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, fields
 
 import numpy as np
-from numpy.typing import ArrayLike, NDArray
+from numpy.typing import NDArray
 from scipy.special import betaincinv, ndtri
 
 from hurstfit.measurements.beta_pair import beta_interval, beta_pairs, limit_pairs
@@ -28,7 +29,8 @@ Array = NDArray[np.float64]
 
 #: Probability inside an error bar unless the table says otherwise.
 DEFAULT_LEVEL = 0.68
-#: Misfit of a pair to its interval, in half-widths of the interval, from which a row is refused, and from which it is remarked on.
+#: Misfit of a pair to its interval, in half-widths of the interval, from which a row is refused, and from which it is
+#: remarked on.
 LARGEST_MISFIT, NOTABLE_MISFIT = 0.5, 0.1
 #: Forms of a row, and how they are called.
 FORMS = {
@@ -221,9 +223,10 @@ def _decimals(quoted: list[Array]) -> Array:
 def _binomial_half_widths(
     fraction: Array, n: Array, level: Array, unit: Array, symmetric: NDArray[np.bool_]
 ) -> tuple[Array, Array]:
-    """Smallest and largest half-width of an interval for a fraction of n galaxies, over recipes and over rounding of the fraction.
+    """Smallest and largest half-width of an interval for a fraction of n galaxies, over recipes and rounding.
 
-    A symmetric error is read as the normal approximation, whose half-width is then the smallest; an interval may come from any recipe.
+    A symmetric error is read as the normal approximation, whose half-width is then the smallest; an interval may come from
+    any recipe.
     """
     n = np.where(np.isnan(n), 1.0, n)
     z = ndtri((1 + level) / 2)
@@ -234,6 +237,5 @@ def _binomial_half_widths(
         for prior in (0.5, 1.0):
             a, b = f * n + prior, (1 - f) * n + prior
             others.append((betaincinv(a, b, (1 + level) / 2) - betaincinv(a, b, (1 - level) / 2)) / 2)
-    smallest = np.minimum.reduce(normal)
-    smallest = np.where(symmetric, smallest, np.minimum(smallest, np.minimum.reduce(others)))
-    return smallest, np.maximum(np.maximum.reduce(normal), np.maximum.reduce(others))
+    smallest = np.where(symmetric, np.min(normal, axis=0), np.min([*normal, *others], axis=0))
+    return smallest, np.max([*normal, *others], axis=0)

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import io
 from dataclasses import dataclass, field
+from functools import cached_property
 from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from hurstfit.measurements.checks import COLUMNS
+from hurstfit.measurements.columns import COLUMNS
+from hurstfit.measurements.effective import EffectiveCounts, effective_counts
 
 if TYPE_CHECKING:
     from astropy.table import QTable
@@ -26,8 +28,9 @@ class Measurements:
     path : str
         File that it came from, as the user named it.
     table : astropy.table.QTable
-        Columns ``study``, ``z_lo``, ``z_hi``, ``logm_lo``, ``logm_hi`` (dex of solar masses), ``n_total``,
-        ``n_quiescent``, ``rising`` and possibly ``note``.
+        Columns ``study``, ``z_lo``, ``z_hi``, ``logm_lo``, ``logm_hi`` (dex of solar masses), ``rising``, possibly ``note``,
+        and those of ``n_total``, ``n_quiescent``, ``n_effective``, ``fraction``, ``fraction_err``, ``fraction_lo``,
+        ``fraction_hi``, ``interval``, ``limit`` and ``confidence`` that the file has; cells that a row does not use are masked.
     rows : ndarray of int, shape (n_bins,)
         Row of the file, counted from 1, that each bin came from; 1, 2, ... unless told otherwise.
 
@@ -51,6 +54,22 @@ class Measurements:
         if rows.shape != (len(self.table),):
             raise ValueError(f"Measurements needs one row number a bin: {len(self.table)}, not shape {rows.shape}")
         object.__setattr__(self, "rows", rows)
+
+    @classmethod
+    def with_effective(cls, path: str, table: QTable, rows: NDArray[np.int64], effective: EffectiveCounts) -> Measurements:
+        """Make measurements whose effective counts are known already."""
+        made = cls(path, table, rows)
+        made.__dict__["effective"] = effective
+        return made
+
+    @cached_property
+    def effective(self) -> EffectiveCounts:
+        """What each row says about its fraction, as effective counts, whatever form it has."""
+        columns: dict[str, NDArray] = {"z_lo": self.z_lo}
+        for name, column in COLUMNS.items():
+            if column.blank and name != "note" and name in self.table.colnames:
+                columns[name] = np.asarray(self.table[name], str) if column.kind == "text" else self._numbers(name)
+        return effective_counts(columns)
 
     @property
     def n_bins(self) -> int:
@@ -89,12 +108,12 @@ class Measurements:
 
     @property
     def n_total(self) -> NDArray[np.float64]:
-        """Galaxies counted in every bin, shape (n_bins,)."""
+        """Galaxies counted in every bin, shape (n_bins,); nan for rows that do not say."""
         return self._numbers("n_total")
 
     @property
     def n_quiescent(self) -> NDArray[np.float64]:
-        """Galaxies labelled quiescent in every bin, shape (n_bins,)."""
+        """Galaxies labelled quiescent in every bin, shape (n_bins,); nan for rows that are no counts."""
         return self._numbers("n_quiescent")
 
     @property
@@ -103,8 +122,11 @@ class Measurements:
         return np.asarray(self.table["rising"], bool)
 
     def _numbers(self, name: str) -> NDArray[np.float64]:
+        if name not in self.table.colnames:
+            return np.full(self.n_bins, np.nan)
         column = self.table[name]
-        return np.array(getattr(column, "value", column), float)
+        column = getattr(column, "value", column)
+        return np.array(np.ma.filled(np.ma.asanyarray(column).astype(float), np.nan))
 
     def row_label(self, i: int | np.integer) -> str:
         """Name a bin for the user, such as ``row 3 (Larkspur-Deep, z 0.5-0.8)``; `i` counts from 0 in this table."""
@@ -132,7 +154,7 @@ class Measurements:
         mask = np.asarray(mask)
         if mask.dtype != bool or mask.shape != (self.n_bins,):
             raise ValueError(f"select needs {self.n_bins} flags, not {mask.dtype} of shape {mask.shape}")
-        return Measurements(self.path, self.table[mask], self.rows[mask])
+        return Measurements.with_effective(self.path, self.table[mask], self.rows[mask], self.effective.select(mask))
 
     def to_ecsv(self) -> str:
         """Write the bins as ECSV text, without loss, with the row numbers as a first column ``row``."""

@@ -72,9 +72,9 @@ class RunParts:
                         f"{self.folder} holds an unfinished run of another configuration, table or version; finish that one with "
                         "what it was begun with, or remove the folder"
                     )
-                arrays = [file[name][...] for name in ARRAYS]
+                arrays = {name: file[name][...] for name in ARRAYS}
                 position, has_normal, normal = file.attrs["random_rest"]
-            blocks.append(Block(*arrays, (int(position), int(has_normal), float(normal))))
+            blocks.append(Block(**arrays, random_rest=(int(position), int(has_normal), float(normal))))
         return blocks
 
     def keep(self, index: int, block: Block) -> None:
@@ -93,8 +93,8 @@ class RunParts:
                     file[name] = getattr(block, name)
         except OSError as error:
             raise HurstfitError(
-                f"block {index + 1} of the run cannot be written into {self.folder} ({error.strerror or error}); what came before "
-                "it is kept: make room and give the same command again"
+                f"block {index + 1} of the run cannot be written into {self.folder} ({error.strerror or error}); what came "
+                "before it is kept: make room and give the same command again"
             ) from error
 
     def remove(self) -> None:

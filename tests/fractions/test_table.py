@@ -12,6 +12,7 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 from scipy import stats
+from scipy.special import ndtr
 
 from hurstfit.errors import HurstfitError
 from hurstfit.fractions.axes import TableAxes, default_axes, window_scale
@@ -21,6 +22,7 @@ from hurstfit.fractions.exact import exact_zero_fraction
 from hurstfit.fractions.simulate import BATCH_WALKS, BatchResult, simulate_batch
 from hurstfit.fractions.store import load_table
 from hurstfit.fractions.table import FractionTable
+from hurstfit.fractions.weights import LARGEST_THRESHOLD
 from hurstfit.walks import NOISE_TYPES, draw_noise, formed_mass, reflect
 
 # Statistical tests fail by chance once in a thousand over all their comparisons (Bonferroni), at fixed seeds.
@@ -30,10 +32,12 @@ AXES = TableAxes(
     steps=np.array([1, 2, 4, 9, 16, 25]),
     masses=np.array([0.0, 0.05, 0.1, 0.2, 0.4]),
     scales=np.array([0.0, 0.25, 0.5, 0.75, 1.0]),
-    thresholds=np.array([0.05, 0.1, 0.2, 0.5, 1.5]),
+    thresholds=np.array([0.05, 0.1, 0.2, 0.5, 1.0, 1.5]),
 )
 MASSES = [None, *AXES.masses]
-CRITERIA = ["zero", *(f"rate<{theta:g}" for theta in AXES.thresholds)]
+THETAS = [theta for theta in AXES.thresholds if theta <= LARGEST_THRESHOLD]
+#: Criteria that may be asked for: the largest threshold only serves the convolution with scatter.
+CRITERIA = ["zero", *(f"rate<{theta:g}" for theta in THETAS)]
 BUILD = Build("type-II", AXES, 10, BATCH_WALKS, 951)
 
 
@@ -127,7 +131,7 @@ def test_fractions_and_errors_stay_within_bounds_everywhere(table: FractionTable
     rng = np.random.default_rng(952)
     for _ in range(200):
         choice: dict[str, Any] = {
-            "criterion": "zero" if rng.random() < 0.3 else f"rate<{math.exp(rng.uniform(math.log(0.05), math.log(1.5)))}",
+            "criterion": "zero" if rng.random() < 0.3 else f"rate<{math.exp(rng.uniform(math.log(0.05), math.log(1.0)))}",
             "window": math.exp(rng.uniform(-1, 4)),
             "min_mass": (None, 0.0, rng.uniform(0.05, 0.4))[rng.integers(3)],
         }
@@ -197,21 +201,44 @@ def test_the_table_that_ships_interpolates_to_what_walks_do_between_its_nodes(no
 # -- scatter and the clock's criterion -------------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize("noise", NOISE_TYPES)
-@pytest.mark.parametrize(("theta", "scatter"), [(0.2, 0.25), (0.1, 0.3), (0.5, 0.2)])
-def test_scatter_moves_rates_across_the_threshold_as_it_does_single_walks(noise: str, theta: float, scatter: float) -> None:
-    H, n, size = 0.84 if noise == "type-I" else 0.9, 64, 60_000
-    rng = np.random.default_rng(954)
-    rates = reflect(draw_noise(noise, H, n, size, rng))
+@functools.cache
+def walks_of(noise: str) -> tuple[float, NDArray[np.float64], NDArray[np.float64]]:
+    """Give H, the last eight rates in units of the mean so far, and formed masses, of 100,000 walks of 64 steps."""
+    H, n = 0.84 if noise == "type-I" else 0.9, 64
+    rates = reflect(draw_noise(noise, H, n, 100_000, np.random.default_rng(954)))
     mass = formed_mass(rates)[:, -1]
     with np.errstate(invalid="ignore"):
-        q = rates[:, -1] * n / mass
-    measured = q * 10 ** (scatter * rng.standard_normal(size))
-    quiescent = (rates[:, -1] == 0) | (measured < theta)
-    p = quiescent.mean()
-    surface = shipped_table(noise).surface(Definition(None, parse_criterion(f"rate<{theta}"), scatter=scatter))
-    # The error of the table is a fifth of that of these walks; 0.001 is left to interpolation in theta.
-    assert abs(float(surface(H, n)) - p) < stats.norm.isf(FALSE_ALARM / 12) * 1.02 * math.sqrt(p * (1 - p) / size) + 1e-3
+        return H, np.where(mass[:, None] > 0, rates[:, -8:] * n / mass[:, None], 0.0), mass
+
+
+SCATTERS = [(0.2, 0.25), (0.1, 0.3), (0.5, 0.2), (0.05, 0.3)]
+
+
+@pytest.mark.parametrize("noise", NOISE_TYPES)
+@pytest.mark.parametrize(("theta", "scatter"), SCATTERS)
+@pytest.mark.parametrize("mass", [None, 0.1])
+@pytest.mark.parametrize("window", [1, 8])
+def test_scatter_moves_rates_across_the_threshold_as_it_does_single_walks(
+    noise: str, theta: float, scatter: float, mass: float | None, window: int
+) -> None:
+    H, recent, formed = walks_of(noise)
+    members = formed >= 0 if mass is None else formed > mass * formed.mean()
+    q = recent[members, -window:].mean(axis=1)
+    # direct convolution, walk by walk: the chance that a normal of this width in log10 brings q below theta
+    with np.errstate(divide="ignore"):
+        chance = np.where(q > 0, ndtr((math.log10(theta) - np.log10(q)) / scatter), 1.0)
+    blurred, sharp = (
+        Definition(mass, parse_criterion(f"rate<{theta}"), float(window), scatter=width) for width in (scatter, 0.0)
+    )
+    table = shipped_table(noise)
+    found, without = (float(table.surface(d)(H, 64, window)) for d in (blurred, sharp))
+    error = float(table.error_of(blurred, H, 64, window))
+    comparisons = 2 * 2 * 2 * 2 * len(SCATTERS)
+    limit = stats.norm.isf(FALSE_ALARM / (2 * comparisons))
+    assert abs(found - chance.mean()) < limit * math.hypot(error, chance.std() / math.sqrt(q.size))
+    # what scatter adds is known better than the fraction itself, from the same walks
+    added = chance - (q < theta)
+    assert abs(found - without - added.mean()) < limit * math.hypot(error, added.std() / math.sqrt(q.size))
 
 
 def test_scatter_of_nothing_changes_nothing_and_more_of_it_finds_more_below_a_low_threshold(
@@ -227,7 +254,7 @@ def test_scatter_of_nothing_changes_nothing_and_more_of_it_finds_more_below_a_lo
 
 def test_specific_rates_are_read_at_the_threshold_that_the_clock_gives(table: FractionTable) -> None:
     surface = table.surface(Definition(0.1, parse_criterion("ssfr<0.3")))
-    for theta in (0.05, 0.13, 0.2, 1.5):
+    for theta in (0.05, 0.13, 0.2, 1.0):
         expected = table.surface(Definition(0.1, parse_criterion(f"rate<{theta}")))(0.85, 16.0)
         assert float(surface(0.85, 16.0, 1.0, theta)) == pytest.approx(float(expected), abs=1e-12)
 
@@ -235,7 +262,7 @@ def test_specific_rates_are_read_at_the_threshold_that_the_clock_gives(table: Fr
 # -- how errors hang together ----------------------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize(("mass", "criterion"), [(None, "zero"), (0.0, "zero"), (0.1, "rate<0.05"), (0.4, "rate<1.5")])
+@pytest.mark.parametrize(("mass", "criterion"), [(None, "zero"), (0.0, "zero"), (0.1, "rate<0.05"), (0.4, "rate<0.5")])
 def test_replicates_carry_the_standard_error_and_the_correlations(
     table: FractionTable, batches: list[BatchResult], mass: float | None, criterion: str
 ) -> None:
@@ -307,8 +334,8 @@ def test_a_table_without_replicates_says_so(table: FractionTable) -> None:
         (0.7, 10, {"min_mass": 0.01}, "not 0.01"),
         (0.7, 10, {"min_mass": 0.5}, "more than 0.05 to 0.4 of the mean mass; not 0.5"),
         (0.7, 10, {"min_mass": -0.1}, "not -0.1"),
-        (0.7, 10, {"criterion": "rate<0.01"}, "thresholds from 0.05 to 1.5, not 0.01"),
-        (0.7, 10, {"criterion": "rate<2"}, "thresholds from 0.05 to 1.5, not 2"),
+        (0.7, 10, {"criterion": "rate<0.01"}, "thresholds from 0.05 to 1, not 0.01"),
+        (0.7, 10, {"criterion": "rate<1.2"}, "thresholds from 0.05 to 1, not 1.2"),
         (0.7, 10, {"criterion": "rate<-1"}, "'rate<-1' is not a criterion"),
         (0.7, 10, {"criterion": "rate<nan"}, "'rate<nan' is not a criterion"),
         (0.7, 10, {"criterion": "rate"}, "'rate' is not a criterion"),
@@ -351,3 +378,16 @@ def test_criteria_are_read_as_users_write_them(text: str, kind: str, limit: floa
     criterion = parse_criterion(text)
     assert (criterion.kind, criterion.limit) == (kind, limit)
     assert parse_criterion(str(criterion)) == criterion
+
+
+@pytest.mark.parametrize("scatter", [0.0, 0.1])
+def test_the_error_at_a_threshold_that_follows_the_clock_is_that_at_the_threshold(table: FractionTable, scatter: float) -> None:
+    specific = Definition(0.1, parse_criterion("ssfr<0.3"), scatter=scatter)
+    for theta in (0.05, 0.1, 0.2, 0.5):
+        plain = Definition(0.1, parse_criterion(f"rate<{theta}"), scatter=scatter)
+        expected = table.error_of(plain, AXES.h[:, None], AXES.steps[None, 1:])
+        found = table.error_of(specific, AXES.h[:, None], AXES.steps[None, 1:], threshold=theta)
+        np.testing.assert_allclose(found, expected, rtol=1e-9, atol=1e-15)
+    between = float(table.error_of(specific, 0.85, 16, threshold=math.sqrt(0.1 * 0.2)))
+    ends = [float(table.error_of(specific, 0.85, 16, threshold=theta)) for theta in (0.1, 0.2)]
+    assert between == pytest.approx(np.mean(ends), rel=1e-9)

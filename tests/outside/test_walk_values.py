@@ -7,6 +7,7 @@ over all comparisons of its test (Bonferroni).
 from __future__ import annotations
 
 import functools
+import itertools
 import math
 from collections.abc import Callable, Sequence
 from concurrent.futures import ThreadPoolExecutor
@@ -16,6 +17,8 @@ import numpy as np
 import pytest
 from numpy.typing import NDArray
 from scipy import stats
+from scipy.integrate import quad
+from scipy.special import ndtr
 from scipy.stats import multivariate_normal
 
 from hurstfit.fractions.axes import TableAxes
@@ -125,24 +128,43 @@ def test_simulated_walks_reach_the_exact_values_up_to_three_steps(noise: str) ->
     assert (error <= t_limit(error.size, 48) * se + 1e-6).all()
 
 
+def orthant_probability(noise: str, H: float, n: int, accuracy: float) -> float:
+    """P(S_n = 0) by scipy's multivariate normal distribution, from covariances without the package's own matrices."""
+    if noise == "type-I":
+        t = np.arange(1.0, n + 1)
+        covariance = (t[:, None] ** (2 * H) + t ** (2 * H) - np.abs(t[:, None] - t) ** (2 * H)) / 2
+    else:
+        psi = [math.gamma(k + H - 0.5) / (math.gamma(H - 0.5) * math.gamma(k + 1)) for k in range(n)]
+        response = np.array([[psi[a - b] if a >= b else 0.0 for b in range(n)] for a in range(n)])
+        backward = np.cumsum(response[::-1], axis=0)
+        covariance = backward @ backward.T
+    orthant = multivariate_normal(np.zeros(n), covariance, abseps=accuracy, releps=0, maxpts=10**6, seed=703)
+    return float(orthant.cdf(np.zeros(n)))
+
+
+MVN_H = [("type-I", [0.1, 0.3, 0.75, 0.9375, 0.99]), ("type-II", [0.1, 0.3, 0.75, 0.95, 1.1, 1.3])]
+
+
+@pytest.mark.parametrize(("noise", "h"), MVN_H)
+def test_the_shipped_table_agrees_with_the_multivariate_normal_distribution_to_twenty_steps(noise: str, h: list[float]) -> None:
+    table = shipped_table(noise)
+    steps = [n for n in table.axes.steps.tolist() if 4 <= n <= 20]
+    assert steps[-1] == 20
+    assert set(h) <= set(table.axes.h)
+    grid = np.array(h)[:, None], np.array(steps)
+    expected = np.array([[orthant_probability(noise, H, n, 1e-4) for n in steps] for H in h])
+    # scipy's abseps bounds a multiple of the standard error of its lattice rule
+    z = (table.fraction(*grid) - expected) / np.hypot(table.standard_error(*grid), 1e-4)
+    assert np.abs(z).max() < t_limit(z.size, int(table.made_by["batches"]))
+    # the table resolves five per ten thousand there
+    assert table.standard_error(*grid).max() < 5e-4
+
+
 @pytest.mark.parametrize("noise", NOISE_TYPES)
 def test_simulated_walks_agree_with_the_multivariate_normal_distribution_up_to_ten_steps(noise: str) -> None:
     h, steps = [0.3, 0.75, 0.95], [4, 5, 7, 10]
     batches = batches_of(noise, zero_only(h, steps), 64, 702)[:, :, :, 0, 0, 0]
-    expected = np.empty((3, 4))
-    for i, H in enumerate(h):
-        for j, n in enumerate(steps):
-            # increments as rows of B e or of their own covariance, then backward sums, without the package's own matrices
-            if noise == "type-I":
-                t = np.arange(1.0, n + 1)
-                covariance = (t[:, None] ** (2 * H) + t ** (2 * H) - np.abs(t[:, None] - t) ** (2 * H)) / 2
-            else:
-                psi = [math.gamma(k + H - 0.5) / (math.gamma(H - 0.5) * math.gamma(k + 1)) for k in range(n)]
-                response = np.array([[psi[a - b] if a >= b else 0.0 for b in range(n)] for a in range(n)])
-                backward = np.cumsum(response[::-1], axis=0)
-                covariance = backward @ backward.T
-            orthant = multivariate_normal(np.zeros(n), covariance, abseps=1e-5, releps=0, maxpts=10**6, seed=703)
-            expected[i, j] = orthant.cdf(np.zeros(n))
+    expected = np.array([[orthant_probability(noise, H, n, 1e-5) for n in steps] for H in h])
     se = np.hypot(batches.std(axis=0, ddof=1) / 8, 1e-5)
     z = (batches.mean(axis=0) - expected) / se
     assert np.abs(z).max() < t_limit(z.size, 64)
@@ -202,6 +224,100 @@ def test_the_shipped_table_holds_the_exact_values(noise: str) -> None:
     if noise == "type-I":
         np.testing.assert_allclose(table.fraction(1.0, [1, 7, 64, 2048]), 0.5, atol=1e-9)
         np.testing.assert_allclose(table.fraction(1.0, [1, 7, 64, 2048], min_mass=0.0), 0.0, atol=1e-9)
+
+
+# -- rates below a threshold, up to three steps -----------------------------------------------------------------------
+
+
+def increments_covariance(noise: str, H: float) -> NDArray[np.float64]:
+    """Covariance of X_1, X_2, X_3 from the formulas."""
+    if noise == "type-I":
+        g = [1.0, (2 ** (2 * H) - 2) / 2, (3 ** (2 * H) - 2 * 2 ** (2 * H) + 1) / 2]
+        return np.array([[g[abs(i - j)] for j in range(3)] for i in range(3)])
+    d = H - 0.5
+    b = np.array([[1.0, 0.0, 0.0], [d, 1.0, 0.0], [d * (d + 1) / 2, d, 1.0]])
+    return b @ b.T
+
+
+def below_threshold(noise: str, H: float, n: int, theta: float, window: int) -> tuple[float, float]:
+    """P(quiescent) of all walks, and of walks with mass, after n = 2 or 3 steps, by integrating the Gaussian density.
+
+    A walk is quiescent if the last increment leaves it below a bound that follows from the ones before, so that the integral over
+    the last one is a conditional normal distribution function; the others are integrated by quadrature, on each side of
+    every line at which the bound has a kink.
+    """
+    covariance = increments_covariance(noise, H)[:n, :n]
+    earlier, cross = covariance[:-1, :-1], covariance[:-1, -1]
+    inverse = np.linalg.inv(earlier)
+    drift = inverse @ cross
+    sd = math.sqrt(covariance[-1, -1] - cross @ drift)
+    norm = 1 / math.sqrt((2 * math.pi) ** (n - 1) * np.linalg.det(earlier))
+
+    def density(*x: float) -> float:
+        """Density of the earlier increments times the probability that the last one leaves the walk quiescent."""
+        rates: list[float] = []
+        for step in x:
+            rates.append(max(0.0, (rates[-1] if rates else 0.0) + step))
+        formed = sum(rates)
+        # mean of the last w rates below theta times the mean of all n, solved for the last rate; at w = n only an empty walk is
+        recent = sum(rates[n - window :]) if window < n else formed
+        bound = (theta * formed / n - recent / window) / (1 / window - theta / n)
+        if formed > 0 and bound <= 0:
+            return 0.0
+        v = np.array(x)
+        # the last rate is below the bound where the last increment is below the bound less the rate before
+        return norm * math.exp(-0.5 * v @ inverse @ v) * float(ndtr((bound - rates[-1] - drift @ v) / sd))
+
+    far = 8.0 * math.sqrt(covariance.diagonal().max())
+    total = 0.0
+    for a, b in ((-far, 0.0), (0.0, far)):
+        if n == 2:
+            total += quad(density, a, b, epsabs=1e-8, epsrel=0)[0]
+            continue
+
+        def over_second(x: float) -> float:
+            # the walk falls to zero at -x; the bound of a window of two steps is positive up to (theta / (1.5 - theta) - 1) x
+            rate = max(x, 0.0)
+            kinks = sorted({-far, 0.0, -rate, (theta / (1.5 - theta) - 1) * rate, far})
+            return sum(quad(lambda y: density(x, y), lo, hi, epsabs=1e-7, epsrel=0)[0] for lo, hi in itertools.pairwise(kinks))
+
+        total += quad(over_second, a, b, epsabs=1e-6, epsrel=0)[0]
+    empty = multivariate_normal(np.zeros(n), covariance, abseps=1e-7, releps=0, seed=703).cdf(np.zeros(n))
+    return total, (total - empty) / (1 - empty)
+
+
+RATE_H = {"type-I": [0.3, 0.75, 0.96], "type-II": [0.3, 0.8, 1.1]}
+
+
+@pytest.mark.parametrize("noise", NOISE_TYPES)
+def test_rates_below_a_threshold_agree_with_integrals_of_the_gaussian_density_up_to_three_steps(noise: str) -> None:
+    h, thetas = RATE_H[noise], [0.2, 0.5]
+    # windows of one, two and three steps at n = 3; of one and two steps (the last scale) at n = 2
+    scales = np.array([0.0, math.log(2) / math.log(3), 1.0])
+    batches = batches_of(noise, TableAxes(np.array(h), np.array([1, 2, 3]), np.array([0.0]), scales, np.array(thetas)), 64, 714)
+    mean, se = batches.mean(axis=0), batches.std(axis=0, ddof=1) / 8
+    comparisons = list(itertools.product(range(len(h)), (2, 3), range(2), (1, 2)))
+    limit = t_limit(2 * len(comparisons), 64)
+    for i, n, k, window in comparisons:
+        node = (i, n - 1, slice(None), 0 if window == 1 else 1 - n, 1 + k)
+        expected = below_threshold(noise, h[i], n, thetas[k], window)
+        # 1e-5 for the quadrature and for single precision
+        assert (np.abs(mean[node] - expected) < limit * se[node] + 1e-5).all(), (h[i], n, thetas[k], window)
+    # after one step a walk is at its mean rate or at zero
+    np.testing.assert_allclose(mean[:, 0, 0, :, 1:], 0.5, atol=1e-6)
+    np.testing.assert_allclose(mean[:, 0, 1, :, 1:], 0.0, atol=1e-6)
+
+
+@pytest.mark.parametrize("noise", NOISE_TYPES)
+def test_the_shipped_table_agrees_with_integrals_of_the_gaussian_density_up_to_three_steps(noise: str) -> None:
+    table = shipped_table(noise)
+    limit = t_limit(24, int(table.made_by["batches"]))
+    for H, n, theta in itertools.product(RATE_H[noise], (2, 3), (0.2, 0.55)):
+        expected = below_threshold(noise, H, n, theta, 1)
+        for mass, value in zip((None, 0.0), expected, strict=True):
+            found = float(table.fraction(H, n, f"rate<{theta}", min_mass=mass))
+            error = float(table.standard_error(H, n, f"rate<{theta}", min_mass=mass))
+            assert abs(found - value) < limit * error + 1e-5, (H, n, theta, mass)
 
 
 # -- asymptotic laws -------------------------------------------------------------------------------------------------

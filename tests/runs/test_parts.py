@@ -38,7 +38,7 @@ def config(case) -> Path:
 
 @pytest.fixture
 def whole(config: Path, tmp_path: Path) -> np.ndarray:
-    """The chain of the uninterrupted run."""
+    """Give the chain of the uninterrupted run."""
     return infer(config, out=tmp_path / "whole.h5").record.coordinates
 
 

@@ -1,0 +1,103 @@
+"""Independent draws of every parameter, once the posterior of H is known exactly.
+
+H comes from its marginal distribution, everything else from its conditional distribution given H, by a few steps of an
+independence Metropolis chain (Tierney 1994, Ann. Stat. 22, 1701) whose proposals are the Gaussians of the quadrature.
+"""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.interpolate import PchipInterpolator
+
+from hurstfit.engines.gaussians import Gaussian
+from hurstfit.engines.peaks import Peaks
+from hurstfit.engines.quadrature import Marginal, MarginalLikelihood
+from hurstfit.posterior import Posterior
+
+__all__ = ["draw_conditionals"]
+
+Array = NDArray[np.float64]
+
+#: Proposals that a chain must have accepted on average before its state counts as a draw, and steps it may take.
+ACCEPTED, LEAST_STEPS, MOST_STEPS = 4.0, 5, 64
+
+
+def draw_conditionals(posterior: Posterior, marginal: Marginal, size: int, rng: np.random.Generator) -> tuple[Array, float]:
+    """Draw independent parameter vectors from the posterior.
+
+    Parameters
+    ----------
+    posterior : Posterior
+        What was integrated.
+    marginal : Marginal
+        Its posterior of H.
+    size : int
+        Number of draws.
+    rng : numpy.random.Generator
+        Source of random numbers.
+
+    Returns
+    -------
+    coordinates : ndarray, shape (size, parameters)
+        Draws in sampling coordinates.
+    acceptance : float
+        Share of proposals that the chains accepted; near 1 where the Gaussians of the quadrature fit.
+    """
+    likelihood = MarginalLikelihood(posterior)
+    # one draw from each of `size` equal slices of probability: quantiles of H are then almost exact
+    h = marginal.quantile((rng.permutation(size) + rng.random(size)) / size)
+    peaks = _between(marginal.nodes, marginal.peaks, h)
+    state = np.zeros((size, len(posterior.parameters)))
+    log_weight = np.full(size, -np.inf)
+    accepted, step, last = 0.0, 0, LEAST_STEPS
+    while step < last:
+        proposal, log_proposal = _propose(likelihood, marginal.bent, h, peaks, rng)
+        fresh = posterior.log_probability(proposal) - log_proposal
+        take = (np.log(rng.random(size)) < fresh - log_weight) | ~np.isfinite(log_weight)
+        state, log_weight = np.where(take[:, None], proposal, state), np.where(take, fresh, log_weight)
+        accepted += float(take.mean()) if step else 0.0
+        step += 1
+        if step == LEAST_STEPS:
+            last = min(MOST_STEPS, max(step, math.ceil(ACCEPTED / max(accepted / (step - 1), 1e-3)) + 1))
+    return state, accepted / (step - 1)
+
+
+def _propose(likelihood: MarginalLikelihood, bent: bool, h: Array, peaks: Peaks, rng: np.random.Generator) -> tuple[Array, Array]:
+    """Draw everything but H from the Gaussians about the peaks; and the log-density of these draws."""
+    size, posterior = h.size, likelihood.posterior
+    proposal = np.zeros((size, len(posterior.parameters)))
+    proposal[:, 0] = h
+    z = rng.standard_normal((size, len(posterior.parameters) - 1))
+    m = len(likelihood.clock_places)
+    clock = peaks.clock.at(z[:, None, :m])[:, 0]
+    proposal[:, likelihood.clock_places] = clock
+    log_proposal = -0.5 * (z**2).sum(axis=1) - peaks.clock.log_scale
+    fractions = likelihood.fractions(h, clock)[0] if bent else None
+    done = m
+    for factor, gaussian in zip(likelihood.factors, peaks.given_clock(clock), strict=True):
+        mine = z[:, None, done : done + factor.dimension]
+        done += factor.dimension
+        if fractions is not None and factor.dimension:
+            given = fractions[:, factor.bins]
+            drawn, log_volume = factor.along_ridge(given, factor.gaussian(given, gaussian.mode), mine)
+            log_proposal = log_proposal - log_volume[:, 0]
+        else:
+            drawn = gaussian.at(mine)
+            log_proposal = log_proposal - gaussian.log_scale
+        proposal[:, factor.places] = drawn[:, 0]
+    return proposal, log_proposal
+
+
+def _between(nodes: Array, peaks: Peaks, h: Array) -> Peaks:
+    """Peaks at other values of H: modes interpolated, everything else that of the nearest node."""
+    nearest = np.abs(nodes[None, :] - h[:, None]).argmin(axis=1)
+    here = peaks.take(nearest)
+
+    def moved(gaussian: Gaussian, near: Gaussian) -> Gaussian:
+        return Gaussian(PchipInterpolator(nodes, gaussian.mode, axis=0)(h), near.spread) if gaussian.mode.size else near
+
+    studies = tuple(moved(all_of, near) for all_of, near in zip(peaks.studies, here.studies, strict=True))
+    return Peaks(here.log_height, moved(peaks.clock, here.clock), studies, here.slopes, here.found)
