@@ -20,7 +20,8 @@ from numpy.typing import NDArray
 
 from hurstfit.errors import HurstfitError, did_you_mean
 from hurstfit.measurements import Measurements
-from hurstfit.priors import Prior, parse_prior
+from hurstfit.prior_entries import parse_prior
+from hurstfit.priors import Prior
 
 __all__ = ["Dispersion", "parse_dispersion"]
 

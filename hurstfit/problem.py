@@ -27,7 +27,8 @@ from hurstfit.measurements import Measurements, read_measurements
 from hurstfit.measurements.wording import measurement_cautions
 from hurstfit.posterior import Parameter, Posterior
 from hurstfit.prediction import BinPrediction
-from hurstfit.priors import Prior, Uniform, parse_prior
+from hurstfit.prior_entries import parse_prior
+from hurstfit.priors import Prior, Uniform
 from hurstfit.selection import SelectionTerms, parse_selection
 
 __all__ = ["Problem", "build_problem", "load_problem"]

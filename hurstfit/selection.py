@@ -27,7 +27,8 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from hurstfit.errors import HurstfitError, did_you_mean
-from hurstfit.priors import Fixed, Prior, parse_prior
+from hurstfit.prior_entries import parse_prior
+from hurstfit.priors import Fixed, Prior
 
 __all__ = ["ALTERNATIVES", "TERMS", "SelectionTerms", "TermKind", "counted_fraction", "parse_selection"]
 

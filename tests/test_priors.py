@@ -13,6 +13,7 @@ from hypothesis import strategies as st
 from scipy import stats
 
 from hurstfit.errors import HurstfitError
+from hurstfit.prior_entries import parse_prior
 from hurstfit.priors import (
     Beta,
     Fixed,
@@ -20,7 +21,6 @@ from hurstfit.priors import (
     TruncatedNormal,
     Uniform,
     beta_from_mean_sd,
-    parse_prior,
 )
 
 INF = math.inf

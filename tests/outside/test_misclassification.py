@@ -7,7 +7,7 @@ import pytest
 from scipy import integrate, interpolate, stats
 
 from hurstfit.counts import BinomialCounts
-from hurstfit.priors import parse_prior
+from hurstfit.prior_entries import parse_prior
 from hurstfit.selection import counted_fraction
 
 # Gelman & Carpenter (2020, J. R. Stat. Soc. C 69, 1269): positives among those tested; negatives called positive, and
