@@ -27,6 +27,8 @@ __all__ = ["Marginal", "MarginalLikelihood", "NotSettledError", "integrate"]
 
 Array = NDArray[np.float64]
 
+#: Bins up to which the quadrature is worth its time: half a minute for 20 studies of 20 bins with a free step length.
+MOST_BINS = 400
 #: Changes that are accepted when nodes are doubled: of the marginal log-likelihood, relative over the bulk of the posterior, and
 #: of the log-evidence, which is a constant and does not touch H.
 TOLERANCE, EVIDENCE_TOLERANCE = 0.01, 0.05
@@ -199,6 +201,8 @@ def integrate(posterior: Posterior, report: Callable[[str], None] | None = None)
     """
     if not posterior.names or posterior.names[0] != "H":
         raise NotSettledError("H is fixed")
+    if posterior.bins.n_bins > MOST_BINS:
+        raise NotSettledError(f"{posterior.bins.n_bins} bins are more than the {MOST_BINS} that it is made for")
     say = report or (lambda words: None)
     likelihood = MarginalLikelihood(posterior)
     if not likelihood.always_possible():

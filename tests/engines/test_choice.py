@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
 import pytest
 
 from hurstfit.engines.choice import run_engine
 from hurstfit.engines.joint import JointSettings
+from hurstfit.engines.quadrature import MOST_BINS
 from hurstfit.errors import HurstfitError
 from hurstfit.problem import load_problem
 
@@ -63,3 +66,12 @@ def test_proposals_that_fit_badly_are_not_used(case, monkeypatch: pytest.MonkeyP
     chain = run_engine(posterior, "auto", QUICK)
     assert chain.engine == "joint"
     assert "5%" in chain.chosen
+
+
+def test_more_bins_than_the_quadrature_is_made_for_go_to_the_ensemble(case) -> None:
+    edges = np.round(np.linspace(0.2, 4.2, MOST_BINS + 2), 4)
+    case.bins(*(f"A,{lo},{hi},10,11,50,6,true" for lo, hi in pairwise(edges)))
+    posterior = load_problem(case.config()).posterior
+    chain = run_engine(posterior, "auto", JointSettings(seed=3, target_ess=200.0, max_rhat=1.1, max_steps=600))
+    assert chain.engine == "joint"
+    assert f"{MOST_BINS + 1} bins are more than the {MOST_BINS}" in chain.chosen
