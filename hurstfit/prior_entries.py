@@ -18,6 +18,7 @@ from hurstfit.priors import (
     Fixed,
     LogNormal,
     Prior,
+    TruncatedBeta,
     TruncatedNormal,
     Uniform,
     range_text,
@@ -39,7 +40,7 @@ def parse_prior(spec: object, *, where: str, lo: float, hi: float, lo_open: bool
         What an error sentence starts with, such as ``demo.toml, [selection.Larkspur-Deep] contamination``.
     lo, hi : float
         Range that the number can have at all; a prior that reaches beyond is refused.  `mean` and `validation` need
-        0..1, `lognormal` needs 0..infinity, and `beta` a range that holds 0..1.
+        0..1, `lognormal` needs 0..infinity, and `beta` a range that meets 0..1, to which it is cut.
     lo_open : bool
         Whether a fixed value at `lo` itself is refused.
 
@@ -103,7 +104,16 @@ class _Entry:
         a, b = self._pair(spec["beta"], "beta", "[a, b]")
         if min(a, b) < BETA_MIN or max(a, b) > BETA_MAX:
             self._refuse(f"found beta = [{a:.6g}, {b:.6g}]; allowed are two numbers from {BETA_MIN:g} to {BETA_MAX:g}")
-        return Beta(a, b)
+        lo, hi = max(self.lo, 0.0), min(self.hi, 1.0)
+        if (lo, hi) == (0.0, 1.0):
+            return Beta(a, b)
+        try:
+            return TruncatedBeta(a, b, lo, hi)
+        except ValueError:
+            self._refuse(
+                f"beta = [{a:.6g}, {b:.6g}] has next to no probability in {range_text(lo, hi)}; "
+                f"allowed is one that keeps more than {LEAST_MASS:g} of it"
+            )
 
     def _mean_sd(self, spec: dict[str, object]) -> Prior:
         if "sd" not in spec:
@@ -215,8 +225,8 @@ _FORMS = {
     "beta": _Form(
         "{beta = [a, b]}",
         _Entry._beta,
-        needs="a range that holds 0 to 1",
-        usable=lambda lo, hi: lo <= 0.0 and hi >= 1.0,
+        needs="a range that meets 0 to 1",
+        usable=lambda lo, hi: lo < 1.0 and hi > 0.0,
     ),
     "mean": _Form("{mean = m, sd = s}", _Entry._mean_sd, ("sd",), "the range 0 to 1", _is_unit),
     "normal": _Form("{normal = [mean, sd]} (may add between = [a, b])", _Entry._normal, ("between",)),

@@ -28,6 +28,7 @@ __all__ = [
     "Fixed",
     "LogNormal",
     "Prior",
+    "TruncatedBeta",
     "TruncatedNormal",
     "Uniform",
     "beta_from_mean_sd",
@@ -256,6 +257,64 @@ class Beta(Prior):
                 from_above = 1.0 - np.exp((np.log(upper * self.b) + ln_b) / self.b)
             x = np.where(lost, np.clip(np.where(low, from_below, from_above), 0.0, 1.0), x)
         return x
+
+
+@dataclass(frozen=True)
+class TruncatedBeta(Prior):
+    """Beta(a, b), cut to `lo`..`hi` within 0..1 and renormalised."""
+
+    a: float
+    b: float
+    lo: float
+    hi: float
+
+    def __post_init__(self) -> None:
+        _require(0.0 <= self.lo < self.hi <= 1.0, "a truncated Beta needs 0 <= lo < hi <= 1")
+        _require(self.mass >= LEAST_MASS, "a truncated Beta needs some probability between its limits")
+
+    @cached_property
+    def _whole(self) -> Beta:
+        return Beta(self.a, self.b)
+
+    @cached_property
+    def _end_tails(self) -> tuple[float, float, float, float]:
+        """P below and above the lower limit, P below and above the upper limit, for the Beta that is not cut."""
+        below, above = self._whole._tails(np.array([self.lo, self.hi]))
+        return float(below[0]), float(above[0]), float(below[1]), float(above[1])
+
+    @property
+    def mass(self) -> float:
+        """Probability that the Beta that is not cut has between the limits."""
+        below_lo, above_lo, below_hi, above_hi = self._end_tails
+        return below_hi - below_lo if below_hi <= 0.5 else above_lo - above_hi
+
+    def describe(self) -> str:
+        """Such as ``Beta(2, 2), truncated to 0.05..1: mean 0.507, sd 0.22``."""
+        return f"Beta({self.a:.6g}, {self.b:.6g}), truncated to {range_text(self.lo, self.hi)}: {_moments_text(self)}"
+
+    def _moments(self) -> tuple[float, float]:
+        # x^k times a Beta density is a Beta density again, with a + k in place of a
+        n, ends = self.a + self.b, np.array([self.lo, self.hi])
+        first = self.a / n * float(np.diff(betainc(self.a + 1, self.b, ends))[0]) / self.mass
+        factor = self.a / n * (self.a + 1) / (n + 1)
+        second = factor * float(np.diff(betainc(self.a + 2, self.b, ends))[0]) / self.mass
+        return first, math.sqrt(max(second - first**2, 0.0))
+
+    def _log_density(self, x: Array) -> Array:
+        return self._whole._log_density(x) - math.log(self.mass)
+
+    def _tails(self, x: Array) -> tuple[Array, Array]:
+        below_lo, above_lo, below_hi, above_hi = self._end_tails
+        below, above = self._whole._tails(x)
+        # each difference is taken on the side where its terms are small
+        lower = above_lo - above if below_lo > 0.5 else below - below_lo
+        upper = below_hi - below if below_hi < 0.5 else above - above_hi
+        return np.clip(lower / self.mass, 0.0, 1.0), np.clip(upper / self.mass, 0.0, 1.0)
+
+    def _quantile(self, lower: Array, upper: Array) -> Array:
+        below_lo, above_lo, below_hi, above_hi = self._end_tails
+        x = self._whole._quantile(below_lo * upper + below_hi * lower, above_lo * upper + above_hi * lower)
+        return np.clip(x, self.lo, self.hi)
 
 
 @dataclass(frozen=True)

@@ -319,7 +319,7 @@ MALFORMED = [
     ("{beta = [1, 1], between = [0, 1]}", SHARE, ["found 'between' beside 'beta'"]),
     ("{mean = 0.1}", SHARE, ["'mean' without 'sd'", "{mean = m, sd = s}"]),
     # a form that the number cannot have
-    ("{beta = [3, 57]}", EXPONENT, ["'beta' does not suit", "from 0.05 to 1.3", "holds 0 to 1"]),
+    ("{beta = [3, 57]}", {"lo": 2.0, "hi": 3.0}, ["'beta' does not suit", "from 2 to 3", "meets 0 to 1"]),
     ("{mean = 0.5, sd = 0.1}", RATIO, ["'mean' does not suit", "above 0", "the range 0 to 1", "lognormal = "]),
     ("{validation = [1, 2]}", RATIO, ["'validation' does not suit", "the range 0 to 1"]),
     ("{lognormal = [1, 0.2]}", SHARE, ["'lognormal' does not suit", "without upper end"]),
