@@ -26,7 +26,7 @@ class Block:
     log_probability : ndarray, shape (steps, walkers)
         Log of likelihood times prior there.
     accepted : ndarray of int, shape (walkers,)
-        Accepted proposals in this stretch.
+        How many of the moves that ended a stored step were accepted, in this stretch.
     random_key : ndarray of uint32, shape (624,)
         State of the Mersenne twister at its end.
     random_rest : tuple of (int, int, float)

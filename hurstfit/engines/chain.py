@@ -24,7 +24,7 @@ class Chain:
     log_probability : ndarray, shape (steps, walkers)
         Log of likelihood times prior at each.
     accepted : ndarray of int, shape (walkers,)
-        Accepted proposals.
+        How many of the moves that ended a stored step were accepted.
     warmup : int
         Leading steps that are not used.
     thin : int

@@ -79,7 +79,7 @@ class RunRecord:
     log_probability : ndarray, shape (all steps, walkers)
         Log of likelihood times prior in sampling coordinates.
     accepted : ndarray of int, shape (walkers,)
-        Accepted proposals.
+        How many of the moves that ended a stored step were accepted.
     """
 
     config_name: str
