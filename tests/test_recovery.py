@@ -15,7 +15,8 @@ from scipy import stats
 from scipy.integrate import cumulative_trapezoid
 
 from hurstfit.counts import BinomialCounts
-from hurstfit.engines.joint import JointSettings, sample_joint
+from hurstfit.engines.choice import run_engine
+from hurstfit.engines.joint import JointSettings
 from hurstfit.measurements import Measurements
 from hurstfit.posterior import Posterior
 from hurstfit.problem import load_problem
@@ -59,8 +60,8 @@ def test_the_exact_integral_over_the_exponent_covers_the_truth(case, changes: di
     assert FEWEST <= hits <= MOST
 
 
-@pytest.mark.heavy
-def test_sampling_over_clock_and_selection_covers_the_truth(case) -> None:
+@pytest.mark.parametrize("engine", ["quadrature", pytest.param("joint", marks=pytest.mark.heavy)])
+def test_intervals_over_clock_and_selection_cover_the_truth(case, engine: str) -> None:
     posterior = load_problem(
         case.config(
             clock={"step": {"normal": [20.0, 2.0]}, "z_start": {"uniform": [9.0, 16.0]}},
@@ -76,7 +77,7 @@ def test_sampling_over_clock_and_selection_covers_the_truth(case) -> None:
     hits = 0
     for seed in DATA_SEEDS:
         truth, one = drawn(posterior, seed)
-        chain = sample_joint(one, JointSettings(seed=seed, target_ess=1000.0, max_rhat=1.02, max_steps=20_000))
+        chain = run_engine(one, engine, JointSettings(seed=seed, target_ess=1000.0, max_rhat=1.02, max_steps=60_000))
         assert chain.converged, seed
         draws = one.physical(chain.coordinates[chain.warmup :])[..., 0]
         lo, hi = np.quantile(draws, [0.16, 0.84])

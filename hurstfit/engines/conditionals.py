@@ -22,7 +22,10 @@ __all__ = ["draw_conditionals"]
 Array = NDArray[np.float64]
 
 #: Proposals that a chain must have accepted on average before its state counts as a draw, and steps it may take.
-ACCEPTED, LEAST_STEPS, MOST_STEPS = 4.0, 5, 64
+ACCEPTED, LEAST_STEPS, MOST_STEPS = 20.0, 8, 200
+#: Share of proposals of each block of parameters that are wider, and by how much: without them the chain would hardly ever reach
+#: tails that are heavier than those of a Gaussian, and draws of parameters on a curved ridge would come out too narrow.
+WIDER_SHARE, WIDER = 0.4, 2.2
 
 
 def draw_conditionals(posterior: Posterior, marginal: Marginal, size: int, rng: np.random.Generator) -> tuple[Array, float]:
@@ -56,7 +59,10 @@ def draw_conditionals(posterior: Posterior, marginal: Marginal, size: int, rng: 
     while step < last:
         proposal, log_proposal = _propose(likelihood, marginal.bent, h, peaks, rng)
         fresh = posterior.log_probability(proposal) - log_proposal
-        take = (np.log(rng.random(size)) < fresh - log_weight) | ~np.isfinite(log_weight)
+        # a state that is not possible gives way to whatever comes
+        stands = np.isfinite(log_weight)
+        gain = np.subtract(fresh, log_weight, out=np.full(size, np.inf), where=stands)
+        take = np.log(rng.random(size)) < gain
         state, log_weight = np.where(take[:, None], proposal, state), np.where(take, fresh, log_weight)
         accepted += float(take.mean()) if step else 0.0
         step += 1
@@ -70,11 +76,12 @@ def _propose(likelihood: MarginalLikelihood, bent: bool, h: Array, peaks: Peaks,
     size, posterior = h.size, likelihood.posterior
     proposal = np.zeros((size, len(posterior.parameters)))
     proposal[:, 0] = h
-    z = rng.standard_normal((size, len(posterior.parameters) - 1))
     m = len(likelihood.clock_places)
+    blocks = [_block(size, d, rng) for d in (m, *(factor.dimension for factor in likelihood.factors))]
+    z = np.concatenate([block for block, _ in blocks], axis=1)
     clock = peaks.clock.at(z[:, None, :m])[:, 0]
     proposal[:, likelihood.clock_places] = clock
-    log_proposal = -0.5 * (z**2).sum(axis=1) - peaks.clock.log_scale
+    log_proposal = sum((log_density for _, log_density in blocks), -peaks.clock.log_scale)
     fractions = likelihood.fractions(h, clock)[0] if bent else None
     done = m
     for factor, gaussian in zip(likelihood.factors, peaks.given_clock(clock), strict=True):
@@ -89,6 +96,16 @@ def _propose(likelihood: MarginalLikelihood, bent: bool, h: Array, peaks: Peaks,
             log_proposal = log_proposal - gaussian.log_scale
         proposal[:, factor.places] = drawn[:, 0]
     return proposal, log_proposal
+
+
+def _block(size: int, dimension: int, rng: np.random.Generator) -> tuple[Array, Array]:
+    """Draw deviates of one block, some of them wider; and their log-density, without the factors of 2 pi."""
+    wider = rng.random(size) < WIDER_SHARE
+    z = rng.standard_normal((size, dimension)) * np.where(wider, WIDER, 1.0)[:, None]
+    square = (z**2).sum(axis=1)
+    narrow = np.log1p(-WIDER_SHARE) - 0.5 * square
+    wide = np.log(WIDER_SHARE) - 0.5 * square / WIDER**2 - dimension * np.log(WIDER)
+    return z, np.logaddexp(narrow, wide)
 
 
 def _between(nodes: Array, peaks: Peaks, h: Array) -> Peaks:
