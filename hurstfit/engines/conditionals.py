@@ -102,10 +102,14 @@ def _block(size: int, dimension: int, rng: np.random.Generator) -> tuple[Array, 
     """Draw deviates of one block, some of them wider; and their log-density, without the factors of 2 pi."""
     wider = rng.random(size) < WIDER_SHARE
     z = rng.standard_normal((size, dimension)) * np.where(wider, WIDER, 1.0)[:, None]
+    return z, _log_density(z)
+
+
+def _log_density(z: Array) -> Array:
     square = (z**2).sum(axis=1)
     narrow = np.log1p(-WIDER_SHARE) - 0.5 * square
-    wide = np.log(WIDER_SHARE) - 0.5 * square / WIDER**2 - dimension * np.log(WIDER)
-    return z, np.logaddexp(narrow, wide)
+    wide = np.log(WIDER_SHARE) - 0.5 * square / WIDER**2 - z.shape[1] * np.log(WIDER)
+    return np.logaddexp(narrow, wide)
 
 
 def _between(nodes: Array, peaks: Peaks, h: Array) -> Peaks:

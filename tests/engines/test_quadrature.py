@@ -7,6 +7,7 @@ import pytest
 from scipy import stats
 from scipy.special import logsumexp
 
+from hurstfit.engines import conditionals
 from hurstfit.engines.conditionals import draw_conditionals
 from hurstfit.engines.joint import JointSettings, sample_joint
 from hurstfit.engines.quadrature import Marginal, MarginalLikelihood, NotSettledError, integrate
@@ -148,6 +149,18 @@ def test_a_degenerate_prior_gives_the_prior_back(case) -> None:
     assert stats.kstest(draws[:, 0], stats.norm.cdf).pvalue > 1e-4
 
 
+def ideal_acceptance(dimensions: list[int], rng: np.random.Generator) -> float:
+    """Acceptance of the proposals of independent blocks where the target is exactly Gaussian."""
+    size = 50_000
+    here = [rng.standard_normal((size, d)) for d in dimensions]
+    blocks = [conditionals._block(size, d, rng) for d in dimensions]
+    gain = np.zeros(size)
+    for z, (proposed, log_proposed) in zip(here, blocks, strict=True):
+        gain += -0.5 * (proposed**2).sum(axis=1) - log_proposed
+        gain -= -0.5 * (z**2).sum(axis=1) - conditionals._log_density(z)
+    return float(np.minimum(1.0, np.exp(gain)).mean())
+
+
 def test_draws_have_the_marginal_of_h_and_repeat_with_the_seed(case) -> None:
     posterior = posterior_of(case, **FREE)
     marginal = integrate(posterior)
@@ -156,7 +169,9 @@ def test_draws_have_the_marginal_of_h_and_repeat_with_the_seed(case) -> None:
     third, _ = draw_conditionals(posterior, marginal, 2000, np.random.default_rng(6))
     assert np.array_equal(first, second)
     assert not np.array_equal(first, third)
-    assert acceptance > 0.5
+    # most of what would be accepted if the Gaussians fitted perfectly
+    dimensions = [2, *(factor.dimension for factor in MarginalLikelihood(posterior).factors)]
+    assert acceptance > 0.8 * ideal_acceptance(dimensions, np.random.default_rng(7))
     ranks = np.sort(first[:, 0])
     # one draw from each of 2000 equal slices of probability
     assert np.abs(ranks - marginal.quantile((np.arange(2000) + 0.5) / 2000)).max() < 0.5 * ranks.std()
