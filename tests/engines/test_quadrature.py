@@ -150,7 +150,7 @@ def test_a_degenerate_prior_gives_the_prior_back(case) -> None:
 
 
 def ideal_acceptance(dimensions: list[int], rng: np.random.Generator) -> float:
-    """Acceptance of the proposals of independent blocks where the target is exactly Gaussian."""
+    """Compute the acceptance of independent blocks where the target is exactly Gaussian."""
     size = 50_000
     here = [rng.standard_normal((size, d)) for d in dimensions]
     blocks = [conditionals._block(size, d, rng) for d in dimensions]
